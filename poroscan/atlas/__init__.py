@@ -1,0 +1,1 @@
+"""The library of simulated particles and the match against it."""

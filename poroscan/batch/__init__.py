@@ -1,0 +1,1 @@
+"""From a folder of pictures to a run folder."""

@@ -1,0 +1,1 @@
+"""Thermodynamics of demixing and the phase-field simulation of a particle."""

@@ -1,0 +1,1 @@
+"""Reading: pictures, fields, pixel size, banner, image quality, folders."""

@@ -1,0 +1,1 @@
+"""Every quantity of a section, as pure functions of arrays and spacing."""

@@ -1,0 +1,1 @@
+"""Limits, statistics, charts and comparison of batches."""

@@ -1,0 +1,376 @@
+"""The catalogue: every reported quantity once, with key, unit, definition, source and kind of interval.
+
+Measuring functions work in pixels. A ``Record`` holds estimates by *base* name (``pore_d50``); ``Record.row`` turns them
+into the columns of ``particles.csv`` (``pore_d50_um``, ``pore_d50_um_low``, ``pore_d50_um_high``, ``pore_d50_px``), so that a
+length in micrometres exists only where a pixel size is known.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterator, Mapping
+from dataclasses import dataclass, field
+from types import MappingProxyType
+
+import numpy as np
+import numpy.typing as npt
+
+from poroscan.section import PixelSize
+
+#: Power of length -> suffix of the micrometre key and of its pixel twin.
+SUFFIXES: Mapping[int, tuple[str, str]] = MappingProxyType(
+    {
+        0: ("", ""),
+        1: ("_um", "_px"),
+        2: ("_um2", "_px2"),
+        3: ("_um3", "_px3"),
+        -1: ("_per_um", "_per_px"),
+        -2: ("_per_um2", "_per_px2"),
+        -3: ("_per_um3", "_per_px3"),
+    }
+)
+
+UNITS: Mapping[int, str] = MappingProxyType({0: "", 1: "µm", 2: "µm²", 3: "µm³", -1: "1/µm", -2: "1/µm²", -3: "1/µm³"})
+
+
+@dataclass(frozen=True)
+class Flag:
+    """Something a reader must know about a value or a picture: words for people and what to do."""
+
+    words: str
+    remedy: str
+
+
+@dataclass(frozen=True)
+class Quantity:
+    """One reported quantity.
+
+    Parameters
+    ----------
+    base
+        Name without unit; the key of the output column is ``base`` plus the suffix of ``power``.
+    label
+        Words for people, without the unit.
+    power
+        Power of length: 1 for a length, 2 for an area, -1 for a surface per volume, 0 without unit.
+    definition
+        One or two sentences that let a reader recompute it.
+    source
+        Published source of the definition or method.
+    interval
+        What the stated 95 % interval covers, in words; empty where no interval is given.
+    dimensions
+        Dimensions in which the quantity is defined.
+    views
+        Views that can give it.
+    group
+        Heading under which it is listed.
+    unit
+        Unit in words for people where it is neither a power of length nor a plain number (``°``); else empty.
+    """
+
+    base: str
+    label: str
+    power: int
+    definition: str
+    source: str
+    interval: str = ""
+    dimensions: tuple[int, ...] = (2, 3)
+    views: tuple[str, ...] = ("whole", "edge", "interior")
+    group: str = ""
+    unit: str = ""
+
+    @property
+    def key(self) -> str:
+        """Column name in micrometres (or without unit)."""
+        return self.base + SUFFIXES[self.power][0]
+
+    @property
+    def pixel_key(self) -> str | None:
+        """Column name of the pixel twin; None for a quantity without length."""
+        return None if self.power == 0 else self.base + SUFFIXES[self.power][1]
+
+    @property
+    def unit_words(self) -> str:
+        """Unit as printed for people."""
+        return self.unit or UNITS[self.power]
+
+
+@dataclass(frozen=True)
+class Estimate:
+    """A value with its expanded uncertainty, in pixels (or without unit).
+
+    Parameters
+    ----------
+    value
+        The estimate; NaN where it is undefined (a flag says why).
+    low, high
+        Ends of the 95 % interval; NaN where none is stated.
+    components
+        Standard uncertainties by name (``sampling``, ``threshold``, ``pixel_size``, ``frame``), same unit as the value.
+    """
+
+    value: float
+    low: float = math.nan
+    high: float = math.nan
+    components: Mapping[str, float] = field(default_factory=lambda: MappingProxyType({}))
+
+
+@dataclass(frozen=True, eq=False)
+class Curve:
+    """One measured curve of one particle, in pixels.
+
+    ``x_power`` and ``y_power`` are powers of length as in ``Quantity.power``; low and high bound the 95 % interval (NaN where
+    none is stated).
+    """
+
+    name: str
+    x: npt.NDArray[np.float64]
+    y: npt.NDArray[np.float64]
+    low: npt.NDArray[np.float64]
+    high: npt.NDArray[np.float64]
+    x_power: int = 1
+    y_power: int = 0
+
+
+@dataclass(frozen=True, eq=False)
+class Record:
+    """Every estimate of one particle by base name, with its flags.
+
+    Raises
+    ------
+    KeyError
+        If a name is not in the catalogue or a flag not in the list.
+    """
+
+    estimates: Mapping[str, Estimate]
+    flags: tuple[str, ...] = ()
+
+    def __post_init__(self) -> None:
+        for base in self.estimates:
+            quantity(base)
+        for flag in self.flags:
+            if flag not in FLAGS:
+                raise KeyError(f"unknown flag {flag!r}; known: {', '.join(FLAGS)}")
+
+    def __getitem__(self, base: str) -> Estimate:
+        return self.estimates[base]
+
+    def row(self, pixel_size: PixelSize) -> dict[str, float]:
+        """Columns of ``particles.csv`` in catalogue order: value, low, high, and the pixel twin.
+
+        Values in micrometres are NaN where the pixel size is unknown. Where the pixel size has an uncertainty, it is
+        added in quadrature to the half-widths of lengths (JCGM 100:2008, 5.1.2).
+        """
+        row: dict[str, float] = {}
+        for q in CATALOGUE:
+            e = self.estimates.get(q.base, Estimate(math.nan))
+            scale = 1.0 if q.power == 0 else (math.nan if pixel_size.um is None else pixel_size.um**q.power)
+            low, high = _with_pixel_size(e, q.power, pixel_size.relative_uncertainty)
+            row[q.key] = e.value * scale
+            if q.interval:
+                row[f"{q.key}_low"] = low * scale
+                row[f"{q.key}_high"] = high * scale
+            if q.pixel_key is not None:
+                row[q.pixel_key] = e.value
+        return row
+
+
+def _with_pixel_size(e: Estimate, power: int, relative: float) -> tuple[float, float]:
+    if power == 0 or relative == 0 or not math.isfinite(e.value):
+        return e.low, e.high
+    extra = 1.959964 * abs(power) * relative * abs(e.value)
+    return e.value - math.hypot(e.value - e.low, extra), e.value + math.hypot(e.high - e.value, extra)
+
+
+def quantity(base: str) -> Quantity:
+    """The catalogue entry of a base name.
+
+    Raises
+    ------
+    KeyError
+        If the catalogue has no such quantity; the message names the nearest ones.
+    """
+    try:
+        return _BY_BASE[base]
+    except KeyError:
+        import difflib
+
+        near = difflib.get_close_matches(base, _BY_BASE, n=3)
+        raise KeyError(f"no quantity {base!r} in the catalogue; nearest: {', '.join(near) or 'none'}") from None
+
+
+def by_key(key: str) -> Quantity:
+    """The catalogue entry of an output column (micrometre key, pixel twin or base name).
+
+    Raises
+    ------
+    KeyError
+        If no quantity has this column; the message names the nearest ones.
+    """
+    try:
+        return _BY_KEY[key]
+    except KeyError:
+        import difflib
+
+        near = difflib.get_close_matches(key, _BY_KEY, n=3)
+        raise KeyError(f"no column {key!r} in the catalogue; nearest: {', '.join(near) or 'none'}") from None
+
+
+def groups() -> Iterator[tuple[str, tuple[Quantity, ...]]]:
+    """Catalogue entries by heading, in catalogue order."""
+    names = dict.fromkeys(q.group for q in CATALOGUE)
+    for name in names:
+        yield name, tuple(q for q in CATALOGUE if q.group == name)
+
+
+#: Closed list of flags: key -> words and remedy.
+FLAGS: Mapping[str, Flag] = MappingProxyType(
+    {
+        # scale
+        "no_pixel_size": Flag(
+            "no pixel size known; lengths are given in pixels only",
+            "give --pixel-size, a sidecar table, or a picture with its header",
+        ),
+        "pixel_size_conflict": Flag(
+            "two sources of the pixel size differ by more than 2 %", "check which is right and give --pixel-size"
+        ),
+        "scale_label_unread": Flag(
+            "a scale bar was found, but its label could not be read",
+            "give the bar's length in the sidecar table, or install the ocr extra",
+        ),
+        # picture quality
+        "clipped": Flag(
+            "a notable share of pixels is pure black or pure white",
+            "lower the contrast or brightness at the microscope",
+        ),
+        "noisy": Flag("the picture is noisy", "scan more slowly or average frames"),
+        "blurred": Flag("the picture is blurred", "refocus, correct astigmatism"),
+        "uneven_illumination": Flag(
+            "the background brightness varies across the picture",
+            "check detector and tilt; the segmentation corrects for it",
+        ),
+        "charging": Flag("bright bands point to charging", "coat the specimen or lower the voltage"),
+        "constant_picture": Flag("the picture has one grey value only", "check the file"),
+        # outline and view
+        "no_particle": Flag("no particle was found", "check the overlay; set the view or the outline in the recipe"),
+        "interior_view": Flag(
+            "interior view without an outline; size, skin and radial quantities are not defined",
+            "take an overview picture for these",
+        ),
+        "edge_view": Flag(
+            "edge view; the radius comes from a circle fitted to the visible arc",
+            "take an overview picture for size and shape",
+        ),
+        "touches_frame": Flag(
+            "cut by the frame of the picture; left out of size statistics", "take the picture at lower magnification"
+        ),
+        "split_from_touching": Flag(
+            "separated from a touching particle; the outline along the contact is constructed", "check the overlay"
+        ),
+        "outline_uncertain": Flag(
+            "the outline is uncertain", "check the overlay; set the outline method in the recipe or give a mask"
+        ),
+        # pores
+        "no_pores": Flag("no pores were found", "check the overlay; a dense particle has none"),
+        "all_pores": Flag("the whole section was taken for pore", "check the overlay and the threshold"),
+        "no_threshold": Flag("no threshold separates pores from polymer", "give a threshold, strokes or a mask"),
+        "under_resolved": Flag(
+            "many pores are smaller than 5 pixels across", "take the picture at higher magnification"
+        ),
+        "few_pores": Flag("fewer than 20 pores; size statistics are coarse", "measure more particles"),
+        # measurement
+        "few_blocks": Flag(
+            "the section is too small against its structure for a sampling interval",
+            "measure more particles or a larger field",
+        ),
+        "no_spacing": Flag(
+            "no characteristic spacing: the structure factor has no peak",
+            "none needed; the structure has no preferred distance",
+        ),
+        # regime
+        "no_atlas": Flag("no regime: no atlas of simulated particles is available", "install or build an atlas"),
+        "unlike_atlas": Flag("unlike any simulated particle of the atlas", "do not use the regime"),
+        # batch
+        "failed": Flag("the picture could not be measured", "see run.json for the reason"),
+    }
+)
+
+_TRADE = "common practice, no source"
+_SECTION = ("whole",)
+_OUTLINED = ("whole", "edge")
+
+#: The catalogue in the order of the output columns.
+CATALOGUE: tuple[Quantity, ...] = (
+    Quantity(
+        "area",
+        "Section area",
+        2,
+        "Area inside the outline, pores included.",
+        "pixel count",
+        group="Particle",
+        dimensions=(2,),
+    ),
+    Quantity(
+        "equivalent_diameter",
+        "Equivalent diameter",
+        1,
+        "Diameter of the circle of equal area, pores included (edge view: of the fitted circle).",
+        "ISO 9276-6:2008",
+        group="Particle",
+        views=_OUTLINED,
+        interval="circle fit (edge view only)",
+    ),
+    Quantity(
+        "circularity",
+        "Circularity",
+        0,
+        "C = sqrt(4 π A / P²) with the Crofton perimeter P (the root definition).",
+        "ISO 9276-6:2008",
+        group="Particle",
+        dimensions=(2,),
+        views=_SECTION,
+    ),
+    Quantity(
+        "solidity",
+        "Solidity",
+        0,
+        "Area over area of the convex hull.",
+        "ISO 9276-6:2008",
+        group="Particle",
+        dimensions=(2,),
+        views=_SECTION,
+    ),
+    Quantity(
+        "porosity",
+        "Porosity",
+        0,
+        "Pore area (volume) over area (volume) inside the outline.",
+        "Delesse 1847",
+        group="Porosity",
+        interval="sampling within the particle, threshold",
+    ),
+    Quantity(
+        "core_porosity",
+        "Core porosity",
+        0,
+        "Porosity within half the radius: inner quarter of the area.",
+        _TRADE,
+        group="Porosity",
+        views=_OUTLINED,
+        interval="sampling within the particle, threshold",
+    ),
+    Quantity(
+        "shell_porosity",
+        "Shell porosity",
+        0,
+        "Porosity in the outer half of the section, by area.",
+        _TRADE,
+        group="Porosity",
+        views=_OUTLINED,
+        interval="sampling within the particle, threshold",
+    ),
+)
+
+_BY_BASE: dict[str, Quantity] = {q.base: q for q in CATALOGUE}
+_BY_KEY: dict[str, Quantity] = {k: q for q in CATALOGUE for k in (q.base, q.pixel_key, q.key) if k}

@@ -1,0 +1,1 @@
+"""SEM-like pictures of fields, with their true masks."""
