@@ -251,6 +251,7 @@ FLAGS: Mapping[str, Flag] = MappingProxyType(
             "check detector and tilt; the segmentation corrects for it",
         ),
         "charging": Flag("bright bands point to charging", "coat the specimen or lower the voltage"),
+        "bad_pixels": Flag("some pixels were NaN or infinite", "export the picture again from its source"),
         "constant_picture": Flag("the picture has one grey value only", "check the file"),
         # outline and view
         "no_particle": Flag("no particle was found", "check the overlay; set the view or the outline in the recipe"),
