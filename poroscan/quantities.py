@@ -2,14 +2,17 @@
 
 Measuring functions work in pixels. A ``Record`` holds estimates by *base* name (``pore_d50``); ``Record.row`` turns them
 into the columns of ``particles.csv`` (``pore_d50_um``, ``pore_d50_um_low``, ``pore_d50_um_high``, ``pore_d50_px``), so that a
-length in micrometres exists only where a pixel size is known.
+length in micrometres exists only where a pixel size is known. The entries themselves stand in ``quantities.toml``;
+``python -m poroscan.quantities`` writes them as the reference page ``docs/quantities.md``.
 """
 
 from __future__ import annotations
 
 import math
+import tomllib
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, field
+from importlib import resources
 from types import MappingProxyType
 
 import numpy as np
@@ -29,6 +32,9 @@ SUFFIXES: Mapping[int, tuple[str, str]] = MappingProxyType(
         -3: ("_per_um3", "_per_px3"),
     }
 )
+
+#: Unit that is no power of length -> suffix of the key.
+UNIT_SUFFIXES: Mapping[str, str] = MappingProxyType({"°": "_deg"})
 
 UNITS: Mapping[int, str] = MappingProxyType({0: "", 1: "µm", 2: "µm²", 3: "µm³", -1: "1/µm", -2: "1/µm²", -3: "1/µm³"})
 
@@ -82,8 +88,8 @@ class Quantity:
 
     @property
     def key(self) -> str:
-        """Column name in micrometres (or without unit)."""
-        return self.base + SUFFIXES[self.power][0]
+        """Column name in micrometres, in degrees, or without unit."""
+        return self.base + UNIT_SUFFIXES.get(self.unit, SUFFIXES[self.power][0])
 
     @property
     def pixel_key(self) -> str | None:
@@ -289,6 +295,15 @@ FLAGS: Mapping[str, Flag] = MappingProxyType(
             "no characteristic spacing: the structure factor has no peak",
             "none needed; the structure has no preferred distance",
         ),
+        "volume": Flag(
+            "a volume: quantities that only a plane section has are empty", "measure a plane of the field for these"
+        ),
+        "several_pieces": Flag(
+            "the outline holds several separate pieces", "check the overlay; split the particles or give a mask"
+        ),
+        "tiny_particle": Flag(
+            "fewer than 10 pixels across; only its size is measured", "take the picture at higher magnification"
+        ),
         # regime
         "no_atlas": Flag("no regime: no atlas of simulated particles is available", "install or build an atlas"),
         "unlike_atlas": Flag("unlike any simulated particle of the atlas", "do not use the regime"),
@@ -297,81 +312,112 @@ FLAGS: Mapping[str, Flag] = MappingProxyType(
     }
 )
 
-_TRADE = "common practice, no source"
-_SECTION = ("whole",)
-_OUTLINED = ("whole", "edge")
 
-#: The catalogue in the order of the output columns.
-CATALOGUE: tuple[Quantity, ...] = (
-    Quantity(
-        "area",
-        "Section area",
-        2,
-        "Area inside the outline, pores included.",
-        "pixel count",
-        group="Particle",
-        dimensions=(2,),
-    ),
-    Quantity(
-        "equivalent_diameter",
-        "Equivalent diameter",
-        1,
-        "Diameter of the circle of equal area, pores included (edge view: of the fitted circle).",
-        "ISO 9276-6:2008",
-        group="Particle",
-        views=_OUTLINED,
-        interval="circle fit (edge view only)",
-    ),
-    Quantity(
-        "circularity",
-        "Circularity",
-        0,
-        "C = sqrt(4 π A / P²) with the Crofton perimeter P (the root definition).",
-        "ISO 9276-6:2008",
-        group="Particle",
-        dimensions=(2,),
-        views=_SECTION,
-    ),
-    Quantity(
-        "solidity",
-        "Solidity",
-        0,
-        "Area over area of the convex hull.",
-        "ISO 9276-6:2008",
-        group="Particle",
-        dimensions=(2,),
-        views=_SECTION,
-    ),
-    Quantity(
-        "porosity",
-        "Porosity",
-        0,
-        "Pore area (volume) over area (volume) inside the outline.",
-        "Delesse 1847",
-        group="Porosity",
-        interval="sampling within the particle, threshold",
-    ),
-    Quantity(
-        "core_porosity",
-        "Core porosity",
-        0,
-        "Porosity within half the radius: inner quarter of the area.",
-        _TRADE,
-        group="Porosity",
-        views=_OUTLINED,
-        interval="sampling within the particle, threshold",
-    ),
-    Quantity(
-        "shell_porosity",
-        "Shell porosity",
-        0,
-        "Porosity in the outer half of the section, by area.",
-        _TRADE,
-        group="Porosity",
-        views=_OUTLINED,
-        interval="sampling within the particle, threshold",
-    ),
+def _read_catalogue() -> tuple[Quantity, ...]:
+    text = resources.files("poroscan").joinpath("quantities.toml").read_text(encoding="utf-8")
+    entries = []
+    for entry in tomllib.loads(text)["quantity"]:
+        entry |= {name: tuple(entry[name]) for name in ("dimensions", "views") if name in entry}
+        entries.append(Quantity(**entry))
+    return tuple(entries)
+
+
+#: The catalogue in the order of the output columns; its entries stand in quantities.toml.
+CATALOGUE: tuple[Quantity, ...] = _read_catalogue()
+
+#: Columns of ``particles.csv`` that are not estimates, in words.
+ROW_COLUMNS: Mapping[str, str] = MappingProxyType(
+    {
+        "batch": "name of the batch (sub-folder)",
+        "image": "file name of the picture",
+        "particle": "name of the particle within its picture",
+        "centroid_row_px": "centroid of the particle, in rows of the picture",
+        "centroid_col_px": "centroid of the particle, in columns of the picture",
+        "pixel_size_um": "micrometres per pixel; empty where unknown",
+        "pixel_size_source": "where the pixel size comes from",
+        "touches_frame": "the particle is cut by the frame of the picture",
+        "frame_weight": "Miles–Lantuéjoul weight (1 where nothing is cut); multiply counts by it",
+        "regime": "demixing regime inferred from simulations; empty where none is given",
+        "regime_probability": "calibrated probability of that regime",
+        "regime_set": "regimes that cannot be ruled out at the stated coverage",
+        "atlas_distance": "distance to the nearest simulated particle",
+        "flags": "keys of what a reader must know",
+    }
+)
+
+
+@dataclass(frozen=True)
+class PoreColumn:
+    """One column of the table of pores: type, power of length and words."""
+
+    dtype: str
+    power: int
+    words: str
+
+
+#: Columns of ``pores.parquet`` per pore body, in pixels; the table has them all, also when it is empty.
+PORE_COLUMNS: Mapping[str, PoreColumn] = MappingProxyType(
+    {
+        "pore": PoreColumn("int32", 0, "number of the pore body within its particle"),
+        "centroid_plane": PoreColumn("float64", 0, "centroid, plane of the field (0 in a section)"),
+        "centroid_row": PoreColumn("float64", 0, "centroid, row of the picture"),
+        "centroid_col": PoreColumn("float64", 0, "centroid, column of the picture"),
+        "area": PoreColumn("float64", 2, "pixels of the body (voxels in a volume: then a number of voxels)"),
+        "diameter": PoreColumn("float64", 1, "equivalent diameter: circle of equal area, sphere of equal volume"),
+        "inscribed_diameter": PoreColumn("float64", 1, "diameter of the largest inscribed disc or ball"),
+        "depth": PoreColumn("float64", 1, "mean distance from the outline; NaN where no outline is in sight"),
+        "perimeter": PoreColumn("float64", 1, "Crofton perimeter; NaN in a volume"),
+        "feret_max": PoreColumn("float64", 1, "largest Feret diameter; NaN in a volume"),
+        "feret_min": PoreColumn("float64", 1, "smallest Feret diameter; NaN in a volume"),
+        "circularity": PoreColumn(
+            "float64", 0, "sqrt(4 π A / P²) with the Crofton perimeter, at most 1; NaN in a volume"
+        ),
+        "aspect_ratio": PoreColumn("float64", 0, "smallest over largest Feret diameter; NaN in a volume"),
+        "ellipse_ratio": PoreColumn("float64", 0, "minor over major axis of the Legendre ellipse; NaN in a volume"),
+        "orientation_deg": PoreColumn("float64", 0, "direction of the major axis, counter-clockwise from the right"),
+        "solidity": PoreColumn("float64", 0, "area over area of the convex hull; NaN in a volume"),
+        "open": PoreColumn("bool", 0, "belongs to a connected pore that reaches the outline within the section"),
+        "touches_frame": PoreColumn("bool", 0, "cut by the frame of the picture"),
+    }
 )
 
 _BY_BASE: dict[str, Quantity] = {q.base: q for q in CATALOGUE}
 _BY_KEY: dict[str, Quantity] = {k: q for q in CATALOGUE for k in (q.base, q.pixel_key, q.key) if k}
+
+
+def reference_page() -> str:
+    """The catalogue as a Markdown page (``docs/quantities.md``)."""
+    lines = [
+        "# Quantities",
+        "",
+        "Every reported quantity with its definition and source. Written by `python -m poroscan.quantities`; do not edit.",
+        "",
+        "Lengths are micrometres; each has a twin in pixels (`…_px`), which stays filled where no pixel size is known. Where an",
+        "interval is named, `…_low` and `…_high` bound 95 % of what it covers. Pixel-size uncertainty is added to every length.",
+    ]
+    for name, members in groups():
+        lines += [
+            "",
+            f"## {name}",
+            "",
+            "| column | quantity | definition | source | interval covers | given by |",
+            "|---|---|---|---|---|---|",
+        ]
+        lines += [_reference_row(q) for q in members]
+    lines += ["", "## Other columns of particles.csv", "", "| column | meaning |", "|---|---|"]
+    lines += [f"| `{key}` | {words} |" for key, words in ROW_COLUMNS.items()]
+    lines += ["", "## Columns of pores.parquet", "", "| column | type | unit | meaning |", "|---|---|---|---|"]
+    lines += [f"| `{key}` | {c.dtype} | {UNITS[c.power]} | {c.words} |" for key, c in PORE_COLUMNS.items()]
+    lines += ["", "## Flags", "", "| flag | meaning | what to do |", "|---|---|---|"]
+    lines += [f"| `{key}` | {flag.words} | {flag.remedy} |" for key, flag in FLAGS.items()]
+    return "\n".join(lines) + "\n"
+
+
+def _reference_row(q: Quantity) -> str:
+    where = ", ".join(f"{n}-D" for n in q.dimensions) + "; " + ", ".join(q.views)
+    unit = f" ({q.unit_words})" if q.unit_words else ""
+    return f"| `{q.key}` | {q.label}{unit} | {q.definition} | {q.source} | {q.interval or '–'} | {where} |"
+
+
+if __name__ == "__main__":
+    print(reference_page(), end="")

@@ -1,0 +1,170 @@
+"""Arrays that several measuring modules need: computed once, on demand, and released when no longer needed."""
+
+from __future__ import annotations
+
+import math
+from functools import cached_property
+
+import edt
+import numpy as np
+import numpy.typing as npt
+
+from poroscan.measure.settings import MeasureSettings
+from poroscan.section import BoolArray, Section
+
+Float32 = npt.NDArray[np.float32]
+Int32 = npt.NDArray[np.int32]
+
+#: A block for resampling is at least this many structure lengths wide (block bootstrap needs about five correlation
+#: lengths; the integral range of a two-phase medium is about (1.6 structure lengths)²).
+BLOCK_STRUCTURE_LENGTHS = 6.0
+
+#: Blocks are made larger than that as long as about this many fit into the section.
+WANTED_BLOCKS = 49
+
+
+class Shared:
+    """Lazily computed arrays of one section.
+
+    Every array has the shape of the section. Distances are in pixels from the pixel centre to the boundary itself: the
+    Euclidean distance to the nearest pixel centre of the other kind, less half a pixel. The frame of the picture is
+    neither outline nor pore boundary.
+
+    Parameters
+    ----------
+    section
+        The section that is measured.
+    settings
+        Settings of the measurements.
+    """
+
+    def __init__(self, section: Section, settings: MeasureSettings) -> None:
+        self.section = section
+        self.settings = settings
+
+    @cached_property
+    def n_particle(self) -> int:
+        """Number of pixels inside the outline."""
+        return int(np.count_nonzero(self.section.particle))
+
+    @cached_property
+    def n_pores(self) -> int:
+        """Number of pore pixels."""
+        return int(np.count_nonzero(self.section.pores))
+
+    @cached_property
+    def walls(self) -> BoolArray:
+        """Polymer: inside the outline and not pore."""
+        return self.section.particle & ~self.section.pores
+
+    @cached_property
+    def depth(self) -> Float32:
+        """Distance of every particle pixel from the visible outline; 0 outside, inf where no outline is in sight."""
+        depth = distance_inside(self.section.particle)
+        depth[self.section.particle] -= np.float32(0.5)
+        return depth
+
+    @cached_property
+    def pore_distance(self) -> Float32:
+        """Distance of every pore pixel from the nearest wall or from the outside; 0 elsewhere."""
+        distance = distance_inside(self.section.pores)
+        distance[self.section.pores] -= np.float32(0.5)
+        return distance
+
+    @cached_property
+    def wall_distance(self) -> Float32:
+        """Distance of every wall pixel from the nearest pore or from the outside; 0 elsewhere."""
+        distance = distance_inside(self.walls)
+        distance[self.walls] -= np.float32(0.5)
+        return distance
+
+    @cached_property
+    def structure_length(self) -> float:
+        """Length of the structure: 2 φ (1 − φ) / P_L in pixels, NaN where there are no pores or no walls.
+
+        P_L is the number of pore boundaries per unit length of the grid lines; for an exponential (Debye) medium the
+        result is its correlation length (Debye, Anderson and Brumberger 1957).
+        """
+        crossings, length = _grid_crossings(self.section.pores, self.section.particle)
+        if crossings == 0 or length == 0:
+            return math.nan
+        porosity = self.n_pores / self.n_particle
+        return 2.0 * porosity * (1.0 - porosity) * length / crossings
+
+    @cached_property
+    def block_side(self) -> int:
+        """Side of the resampling blocks in pixels."""
+        if self.settings.block_side_px:
+            return self.settings.block_side_px
+        even = (self.n_particle / WANTED_BLOCKS) ** (1.0 / self.section.ndim)
+        structure = self.structure_length
+        smallest = BLOCK_STRUCTURE_LENGTHS * structure if math.isfinite(structure) else 1.0
+        return max(1, round(max(even, smallest)))
+
+    @cached_property
+    def blocks(self) -> Int32:
+        """Block labels for resampling: 1, 2, … inside the outline (numbers may be missing), 0 outside."""
+        return block_labels(self.section.particle, self.block_side)
+
+    @cached_property
+    def n_blocks(self) -> int:
+        """Size of a table indexed by block label (largest possible label + 1)."""
+        return 1 + math.prod(-(-n // self.block_side) for n in self.section.particle.shape)
+
+    def release(self, *names: str) -> None:
+        """Forget arrays that are no longer needed, so that their memory is free; they are computed again if asked for.
+
+        Raises
+        ------
+        ValueError
+            If a name is not that of a lazily computed array.
+        """
+        for name in names:
+            if not isinstance(getattr(type(self), name, None), cached_property):
+                raise ValueError(f"Shared has no lazily computed array {name!r}")
+            self.__dict__.pop(name, None)
+
+
+def distance_inside(mask: BoolArray) -> Float32:
+    """Euclidean distance of every True pixel to the nearest False pixel centre; the array border is no boundary.
+
+    Parameters
+    ----------
+    mask
+        bool array, 2-D or 3-D.
+
+    Returns
+    -------
+    float32 array; 0 on False pixels and inf everywhere inside where no pixel is False.
+
+    References
+    ----------
+    Felzenszwalb and Huttenlocher, Theory of Computing 8 (2012) 415 (the separable exact transform).
+    """
+    if mask.all():
+        return np.full(mask.shape, np.inf, dtype=np.float32)
+    distance: Float32 = edt.edt(np.ascontiguousarray(mask), black_border=False, parallel=1)
+    return distance
+
+
+def block_labels(particle: BoolArray, side: int) -> Int32:
+    """Number the square (cubic) blocks of a grid, 1, 2, …; pixels outside the particle get 0."""
+    labels = np.zeros((1,) * particle.ndim, dtype=np.int32)
+    for axis, n in enumerate(particle.shape):
+        index = (np.arange(n) // side).astype(np.int32)
+        labels = labels * np.int32(-(-n // side)) + index.reshape(
+            [-1 if a == axis else 1 for a in range(particle.ndim)]
+        )
+    return np.where(particle, labels + np.int32(1), np.int32(0)).astype(np.int32)
+
+
+def _grid_crossings(pores: BoolArray, particle: BoolArray) -> tuple[int, int]:
+    crossings = length = 0
+    for axis in range(pores.ndim):
+        a = [slice(None)] * pores.ndim
+        b = [slice(None)] * pores.ndim
+        a[axis], b[axis] = slice(1, None), slice(None, -1)
+        both = particle[tuple(a)] & particle[tuple(b)]
+        length += int(np.count_nonzero(both))
+        crossings += int(np.count_nonzero((pores[tuple(a)] ^ pores[tuple(b)]) & both))
+    return crossings, length
