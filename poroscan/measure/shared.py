@@ -9,6 +9,8 @@ import edt
 import numpy as np
 import numpy.typing as npt
 
+from poroscan.measure.correlation import TwoPoint, radial_average, two_point
+from poroscan.measure.integral_range import block_inflation
 from poroscan.measure.settings import MeasureSettings
 from poroscan.section import BoolArray, Section
 
@@ -110,6 +112,20 @@ class Shared:
     def n_blocks(self) -> int:
         """Size of a table indexed by block label (largest possible label + 1)."""
         return 1 + math.prod(-(-n // self.block_side) for n in self.section.particle.shape)
+
+    @cached_property
+    def two_point(self) -> TwoPoint:
+        """Pair counts of the pores inside the outline, up to the largest lag of the settings."""
+        size = self.n_particle / math.pi * 4 if self.section.ndim == 2 else self.n_particle * 6 / math.pi
+        lag = self.settings.largest_lag_fraction * size ** (1.0 / self.section.ndim)
+        return two_point(self.section.pores, self.section.particle, max_lag=max(2.0, lag))
+
+    @cached_property
+    def block_inflation(self) -> float:
+        """Factor on a variance from blocks for the correlation between neighbouring blocks."""
+        size = self.n_particle ** (1.0 / self.section.ndim)
+        radial = radial_average(self.two_point)
+        return block_inflation(radial, side=self.block_side, size=size, ndim=self.section.ndim)
 
     def release(self, *names: str) -> None:
         """Forget arrays that are no longer needed, so that their memory is free; they are computed again if asked for.

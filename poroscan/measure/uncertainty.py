@@ -28,10 +28,6 @@ from poroscan.quantities import Estimate
 
 Scale = Literal["plain", "log", "logit"]
 
-#: Blocks wanted where the section is large enough: 36 blocks cost 3.6 % in the width of a 95 % interval against infinitely many.
-WANTED_BLOCKS = 36
-#: Side of a block in correlation lengths, at least; below it neighbouring blocks are too much alike.
-LEAST_LENGTHS = 5.0
 #: Effective number of blocks below which no interval is stated by blocks.
 LEAST_BLOCKS = 5.0
 
@@ -70,67 +66,13 @@ def t_quantile(df: float, *, level: float = 0.95) -> float:
     return float(special.ndtri(p)) if math.isinf(df) else float(special.stdtrit(df, p))
 
 
-def block_side(particle: npt.NDArray[np.bool_], correlation_length: float, *, wanted: int = WANTED_BLOCKS) -> float:
-    """Side of the blocks in pixels: ``wanted`` blocks, but never under five correlation lengths.
-
-    Large sections get larger blocks rather than more of them, so that the neglected correlation between neighbours fades.
-    Where even five correlation lengths give too few blocks, few blocks it is: the interval is wide, and says so.
-
-    Raises
-    ------
-    ValueError
-        If the correlation length is negative or not a number (infinite is allowed: one block).
-    """
-    if math.isnan(correlation_length) or correlation_length < 0:
-        raise ValueError(f"correlation_length must be at least 0 pixels, not {correlation_length!r}")
-    size = float(np.count_nonzero(particle)) ** (1 / particle.ndim)
-    return min(max(LEAST_LENGTHS * correlation_length, size / wanted ** (1 / particle.ndim), 1.0), max(particle.shape))
-
-
-def block_labels(particle: npt.NDArray[np.bool_], *, side: float) -> npt.NDArray[np.int32]:
-    """Cut a particle mask into square (cubic) blocks.
-
-    Parameters
-    ----------
-    particle
-        bool mask, 2-D or 3-D.
-    side
-        Side wanted in pixels; each axis of the mask's bounding box is cut into equal parts of at least about this length.
-
-    Returns
-    -------
-    int32 array of the mask's shape: 0 outside, 1…n inside, every number in use.
-
-    Raises
-    ------
-    ValueError
-        If the mask is empty, not bool, or the side is not positive.
-    """
-    if not isinstance(particle, np.ndarray) or particle.dtype != np.bool_:
-        raise ValueError("particle must be a bool array (use array.astype(bool))")
-    if not side > 0:
-        raise ValueError(f"side must be a positive number of pixels, not {side!r}")
-    if not particle.any():
-        raise ValueError("particle is empty: no pixel lies inside the outline")
-    code = np.zeros((1,) * particle.ndim, np.int32)
-    for axis, length in enumerate(particle.shape):
-        others = tuple(a for a in range(particle.ndim) if a != axis)
-        used = np.flatnonzero(particle.any(axis=others))
-        first, extent = int(used[0]), int(used[-1]) - int(used[0]) + 1
-        parts = max(1, round(extent / side))
-        index = np.clip((np.arange(length) - first) * parts // extent, 0, parts - 1).astype(np.int32)
-        code = code * parts + index.reshape([-1 if a == axis else 1 for a in range(particle.ndim)])
-    counts = np.bincount(code[particle])
-    number = np.cumsum(counts > 0, dtype=np.int32) * (counts > 0)
-    labels = np.zeros(particle.shape, np.int32)
-    labels[particle] = number[code[particle]]
-    return labels
-
-
 def block_sums(
     blocks: npt.NDArray[np.int32], weights: npt.NDArray[np.generic] | None = None
 ) -> npt.NDArray[np.float64]:
-    """Sum of ``weights`` (or the pixel count) of every block 1…n; pixels of block 0 are left out."""
+    """Sum of ``weights`` (or the pixel count) over every block 1…n; pixels of block 0 are left out.
+
+    ``blocks`` are labels as of ``Shared.blocks``; numbers that no pixel carries give 0, which the ratio leaves out.
+    """
     n = int(blocks.max(initial=0))
     flat = None if weights is None else np.ravel(weights).astype(np.float64)
     return np.bincount(np.ravel(blocks), flat, minlength=n + 1)[1:].astype(np.float64)

@@ -21,11 +21,11 @@ def boolean_discs(shape: tuple[int, ...], *, radius: float, eta: float, rng: np.
     volume = math.pi * radius**2 if len(shape) == 2 else 4 / 3 * math.pi * radius**3
     n = rng.poisson(eta * math.prod(shape) / volume)
     covered = np.zeros(shape, bool)
-    reach = int(math.ceil(radius)) + 1
+    reach = math.ceil(radius) + 1
     offsets = np.meshgrid(*[np.arange(-reach, reach + 1)] * len(shape), indexing="ij", sparse=True)
     for _ in range(n):
         centre = [rng.uniform(0, s) for s in shape]
-        whole = [int(math.floor(c)) for c in centre]
+        whole = [math.floor(c) for c in centre]
         inside = sum((o + w - c) ** 2 for o, w, c in zip(offsets, whole, centre, strict=True)) < radius**2
         covered[np.ix_(*[(o.ravel() + w) % s for o, w, s in zip(offsets, whole, shape, strict=True)])] |= inside
     return covered
@@ -72,6 +72,6 @@ def s2_level_cut(r: npt.ArrayLike, *, length: float, fraction: float) -> npt.NDA
 
 def disc(radius: float, *, margin: int = 1, centre_shift: tuple[float, float] = (0.0, 0.0)) -> Bool:
     """Round particle mask with a margin: pixel centres within ``radius``."""
-    half = int(math.ceil(radius)) + margin
+    half = math.ceil(radius) + margin
     y, x = np.ogrid[-half : half + 1, -half : half + 1]
     return (y - centre_shift[0]) ** 2 + (x - centre_shift[1]) ** 2 <= radius**2
