@@ -1,0 +1,163 @@
+"""The grey levels of material and pore inside an outline, read from the histogram of flat pixels.
+
+Pixels on edges mix two levels; the flat ones show each level as a mode. Everything below is written for pores darker than the
+material; the caller turns bright pores over.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+from scipy import ndimage
+
+from poroscan.section import BoolArray, FloatArray
+
+Float32 = npt.NDArray[np.float32]
+Counts = npt.NDArray[np.float64]
+
+BINS = 512
+
+
+@dataclass(frozen=True)
+class Levels:
+    """Grey levels inside an outline.
+
+    Parameters
+    ----------
+    material
+        Mode of the material.
+    spread
+        Standard deviation of the material about its mode, from the half of the mode that pores do not reach.
+    pore
+        Mode of the pores where the two are clearly apart; NaN where pores have no level of their own.
+    limit
+        Lower limit of the material: the grey value at which a pixel is as likely pore as material; NaN where nothing lies
+        below the material.
+    excess
+        Fraction of pixels below the material that its own spread does not explain.
+    """
+
+    material: float
+    spread: float
+    pore: float
+    limit: float
+    excess: float
+
+
+@dataclass(frozen=True, eq=False)
+class _Histogram:
+    centres: Counts
+    every: Counts
+    flat: Counts
+    width: float
+
+
+def flat_pixels(grey: Float32, inside: BoolArray) -> BoolArray:
+    """Pixels of small gradient: less than one and a half times the median gradient inside."""
+    slope = np.hypot(ndimage.sobel(grey, 0), ndimage.sobel(grey, 1))
+    core = ndimage.binary_erosion(inside, iterations=2, border_value=1)
+    return core & (slope <= 1.5 * float(np.median(slope[inside])) + 1e-6)
+
+
+def find_levels(grey: Float32, inside: BoolArray, *, residual_noise: float) -> Levels:
+    """Levels of material and pores.
+
+    Parameters
+    ----------
+    grey
+        Smoothed, levelled grey values, pores dark.
+    inside
+        The outline's inside.
+    residual_noise
+        Standard deviation of the noise left after smoothing.
+
+    Returns
+    -------
+    Levels
+        With NaN where there is nothing to find.
+    """
+    values = grey[inside]
+    low, high = float(values.min()), float(values.max())
+    if high - low < 1e-6:
+        return Levels(low, 0.0, math.nan, math.nan, 0.0)
+    histogram = _histogram(grey, inside, low, high, residual_noise)
+    peak = _material_peak(histogram)
+    material = float(histogram.centres[peak])
+    spread = max(_upper_spread(histogram.every, peak) * histogram.width, residual_noise, 1e-6)
+    limit, excess = _limit(histogram, peak, spread)
+    pore = _pore_mode(histogram, material, spread, limit) if math.isfinite(limit) else math.nan
+    return Levels(material, spread, pore, limit, excess)
+
+
+def _histogram(grey: Float32, inside: BoolArray, low: float, high: float, noise: float) -> _Histogram:
+    width = (high - low) / BINS
+    span = (low - 0.5 * width, high + 0.5 * width)
+    every, edges = np.histogram(grey[inside], BINS, span)
+    flat, _ = np.histogram(grey[flat_pixels(grey, inside)], BINS, span)
+    blur = max(1.5, 0.5 * noise / width)
+    centres = 0.5 * (edges[1:] + edges[:-1])
+    return _Histogram(
+        centres.astype(np.float64),
+        ndimage.gaussian_filter1d(every.astype(np.float64), blur, mode="constant"),
+        ndimage.gaussian_filter1d(flat.astype(np.float64), blur, mode="constant"),
+        float(edges[1] - edges[0]),
+    )
+
+
+def _modes(counts: Counts) -> list[tuple[int, float, int, int]]:
+    """Peaks as (bin, mass, left valley, right valley); shallow ripples (valley over 0.8 of the peak) are merged."""
+    rises = np.diff(np.concatenate([[0.0], counts, [0.0]]))
+    tops = [int(k) for k in np.nonzero((rises[:-1] > 0) & (rises[1:] <= 0))[0]]
+    while len(tops) > 1:
+        valleys = [float(counts[a : b + 1].min()) for a, b in zip(tops, tops[1:], strict=False)]
+        ratios = [v / min(counts[a], counts[b]) for v, a, b in zip(valleys, tops, tops[1:], strict=False)]
+        worst = int(np.argmax(ratios))
+        if ratios[worst] < 0.8:
+            break
+        del tops[worst if counts[tops[worst]] < counts[tops[worst + 1]] else worst + 1]
+    cuts = [0] + [a + int(np.argmin(counts[a : b + 1])) for a, b in zip(tops, tops[1:], strict=False)] + [len(counts)]
+    return [(t, float(counts[cuts[i] : cuts[i + 1]].sum()), cuts[i], cuts[i + 1]) for i, t in enumerate(tops)]
+
+
+def _material_peak(histogram: _Histogram) -> int:
+    """The brightest mode that holds at least a third of the largest one's pixels."""
+    modes = _modes(histogram.flat if histogram.flat.sum() > 50 else histogram.every)
+    largest = max(mass for _, mass, _, _ in modes)
+    return max(top for top, mass, _, _ in modes if mass >= 0.35 * largest)
+
+
+def _upper_spread(counts: Counts, peak: int) -> float:
+    """Standard deviation in bins from where the upper side of the mode falls to exp(−1/2)."""
+    below = np.nonzero(counts[peak:] < math.exp(-0.5) * counts[peak])[0]
+    return float(below[0]) if below.size else 1.0
+
+
+def _limit(histogram: _Histogram, peak: int, spread: float) -> tuple[float, float]:
+    x, counts = histogram.centres, histogram.every
+    model = counts[peak] * np.exp(-0.5 * ((x - x[peak]) / spread) ** 2)
+    more = counts[:peak] - model[:peak]
+    excess = float(np.clip(more, 0, None).sum() / counts.sum())
+    below = np.nonzero((counts[:peak] >= 2.0 * model[:peak]) & (x[:peak] < x[peak] - 1.5 * spread))[0]
+    return (float(x[below[-1]]), excess) if below.size else (math.nan, excess)
+
+
+def _pore_mode(histogram: _Histogram, material: float, spread: float, limit: float) -> float:
+    """The darkest mode of flat pixels, where it is clearly apart and holds a good share of what is below the material."""
+    below = histogram.flat[histogram.centres < limit].sum()
+    for top, mass, left, right in _modes(histogram.flat):
+        level = float(histogram.centres[top])
+        if level >= min(limit, material - 3 * spread):
+            break
+        valley = float(histogram.flat[top : right + 1].min())
+        share = mass / max(below, 1.0)
+        if share >= 0.3 and valley <= 0.35 * histogram.flat[top] and mass >= 30:
+            return level
+    return math.nan
+
+
+def median_below(grey: FloatArray, mask: BoolArray) -> float:
+    """Median of ``grey`` over ``mask``; NaN where the mask is empty."""
+    return float(np.median(grey[mask])) if mask.any() else math.nan

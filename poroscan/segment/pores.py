@@ -1,0 +1,189 @@
+"""From grey values to pores: named ways, and the band of each threshold."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass
+from types import MappingProxyType
+
+import numpy as np
+import numpy.typing as npt
+from scipy import ndimage
+from skimage.filters import threshold_otsu
+
+from poroscan.section import BoolArray
+from poroscan.segment.histogram import Levels, find_levels
+from poroscan.segment.result import Threshold
+from poroscan.segment.settings import SegmentSettings
+
+Float32 = npt.NDArray[np.float32]
+
+
+@dataclass(frozen=True, eq=False)
+class Inside:
+    """What a pore method sees: one particle, pores dark.
+
+    Parameters
+    ----------
+    grey
+        Smoothed and levelled grey values (float32), turned over where pores are bright.
+    mask
+        The outline's inside.
+    noise
+        Standard deviation of the noise left in ``grey``.
+    levels
+        Levels of material and pore.
+    """
+
+    grey: Float32
+    mask: BoolArray
+    noise: float
+    levels: Levels
+
+
+@dataclass(frozen=True, eq=False)
+class Pores:
+    """Pore mask with its band.
+
+    Parameters
+    ----------
+    pores, low, high
+        bool arrays; ``low`` holds fewer pores, ``high`` more. Both equal ``pores`` where no threshold exists.
+    level, uncertainty
+        Threshold and its standard uncertainty in the grey values given; NaN where there is none.
+    method
+        In words.
+    flags
+        Keys of ``quantities.FLAGS``.
+    """
+
+    pores: BoolArray
+    low: BoolArray
+    high: BoolArray
+    level: float
+    uncertainty: float
+    method: str
+    flags: tuple[str, ...] = ()
+
+
+#: A mask as a function of the shift of the threshold.
+_MaskAt = Callable[[float], BoolArray]
+
+
+def auto(inside: Inside, settings: SegmentSettings) -> Pores:
+    """Half-way between pore and material where pores have a level of their own, else the lower limit of the material."""
+    levels = inside.levels
+    if not math.isfinite(levels.limit) or levels.excess < 0.0005:
+        return _none(inside, "nothing darker than the material", ("no_pores",))
+    if math.isfinite(levels.pore):
+        level = 0.5 * (levels.pore + levels.material)
+        method = "half-way between the modes of pore and material"
+    else:
+        level = levels.limit
+        method = "lower limit of the material's grey values"
+    spread = abs(levels.limit - level) / math.sqrt(3.0) if math.isfinite(levels.pore) else 0.35 * levels.spread
+    uncertainty = math.hypot(min(spread, 0.1 * (levels.material - level)), 0.25 * inside.noise)
+    return _banded(inside, settings, lambda shift: inside.grey < level + shift, level, uncertainty, method)
+
+
+def global_threshold(inside: Inside, settings: SegmentSettings) -> Pores:
+    """One threshold by Otsu (1979), refused where the two classes are not apart."""
+    values = inside.grey[inside.mask]
+    if float(values.max() - values.min()) < 1e-6:
+        return _none(inside, "one grey value", ("no_threshold",))
+    level = float(threshold_otsu(values))
+    low, high = values[values <= level], values[values > level]
+    gap = float(np.median(high) - np.median(low))
+    if gap < 4.0 * max(inside.levels.spread, inside.noise):
+        return _none(inside, "Otsu's threshold would split the material's own grey values", ("no_threshold",))
+    middle = 0.5 * float(np.median(high) + np.median(low))
+    uncertainty = max(abs(middle - level) / math.sqrt(3.0), 0.02 * gap)
+    return _banded(inside, settings, lambda s: inside.grey < level + s, level, uncertainty, "Otsu's threshold")
+
+
+def local_threshold(inside: Inside, settings: SegmentSettings) -> Pores:
+    """A threshold that follows the local brightness of the material."""
+    base = auto(inside, settings)
+    if not math.isfinite(base.level):
+        return base
+    window = settings.local_window_px or max(15, int(math.sqrt(float(inside.mask.sum())) / 4))
+    material = inside.mask & ~base.high
+    weight = ndimage.uniform_filter(material.astype(np.float32), window)
+    local = ndimage.uniform_filter(np.where(material, inside.grey, np.float32(0)), window)
+    trusted = weight > 0.05
+    offset = np.where(trusted, local / np.maximum(weight, 1e-3) - inside.levels.material, 0.0).astype(np.float32)
+    grey = inside.grey - offset
+    words = f"local threshold, window {window} pixels"
+    return _banded(inside, settings, lambda s: grey < base.level + s, base.level, base.uncertainty, words)
+
+
+def two_level(inside: Inside, settings: SegmentSettings) -> Pores:
+    """Pores start where it is clearly dark and grow to the limit of the material (hysteresis, Canny 1986)."""
+    levels = inside.levels
+    if not math.isfinite(levels.limit):
+        return _none(inside, "nothing darker than the material", ("no_pores",))
+    strict = levels.material - 2.0 * (levels.material - levels.limit)
+
+    def mask(shift: float) -> BoolArray:
+        labels, count = ndimage.label((inside.grey < levels.limit + shift) & inside.mask, np.ones((3, 3)))
+        keep = np.zeros(count + 1, bool)
+        keep[labels[(inside.grey < strict + shift) & inside.mask]] = True
+        keep[0] = False
+        return keep[labels]
+
+    return _banded(inside, settings, mask, levels.limit, 0.35 * levels.spread, "two levels")
+
+
+def fixed(inside: Inside, settings: SegmentSettings, level: float) -> Pores:
+    """The user's own threshold."""
+    return _banded(
+        inside, settings, lambda s: inside.grey < level + s, level, settings.threshold_uncertainty, "given threshold"
+    )
+
+
+PORES: Mapping[str, Callable[[Inside, SegmentSettings], Pores]] = MappingProxyType(
+    {"auto": auto, "global": global_threshold, "local": local_threshold, "two_level": two_level}
+)
+
+
+def _banded(
+    inside: Inside, settings: SegmentSettings, mask_at: _MaskAt, level: float, uncertainty: float, method: str
+) -> Pores:
+    least = settings.min_pore_px or 4
+    masks = [tidy(mask_at(shift) & inside.mask, inside.mask, least) for shift in (0.0, -uncertainty, uncertainty)]
+    pores = masks[0]
+    share = float(pores.sum()) / max(float(inside.mask.sum()), 1.0)
+    flags = ("no_pores",) if share == 0.0 else (("all_pores",) if share > 0.97 else ())
+    return Pores(pores, masks[1] & pores, masks[2] | pores, level, uncertainty, method, flags)
+
+
+def _none(inside: Inside, method: str, flags: tuple[str, ...]) -> Pores:
+    empty = np.zeros_like(inside.mask)
+    return Pores(empty, empty, empty, math.nan, math.nan, method, flags)
+
+
+def tidy(pores: BoolArray, mask: BoolArray, least: int) -> BoolArray:
+    """Drop pores, and islands inside pores, of fewer than ``least`` pixels."""
+    return mask & ~_without_small(mask & ~_without_small(pores, least), least)
+
+
+def _without_small(mask: BoolArray, least: int) -> BoolArray:
+    if least <= 1:
+        return mask
+    labels, _ = ndimage.label(mask)
+    keep = np.bincount(labels.ravel()) >= least
+    keep[0] = False
+    return keep[labels]
+
+
+def levels_of(grey: Float32, mask: BoolArray, noise: float) -> Levels:
+    """Levels of material and pores inside an outline; see ``histogram.find_levels``."""
+    return find_levels(grey, mask, residual_noise=noise)
+
+
+def threshold_of(pores: Pores, *, bright: bool) -> Threshold | None:
+    """The threshold on the picture's own scale; None where there is none."""
+    if not math.isfinite(pores.level):
+        return None
+    return Threshold(-pores.level if bright else pores.level, pores.uncertainty, bright, pores.method)
