@@ -1,31 +1,24 @@
-"""Two-point correlation of the pores inside an arbitrary outline, with exact pair counts.
+"""What the two-point correlation says about a section: correlation length, integral range, anisotropy, curves.
 
-S2(h) is the share of pore–pore pairs among all pairs of points h apart that both lie inside the outline:
-
-    S2(h) = Σ_x I(x) I(x+h) / Σ_x W(x) W(x+h),
-
-I the pores, W the particle. Both sums are autocorrelations and come from real fast Fourier transforms. The arrays are
-padded by the largest lag only, which is all that is needed for the lags kept to be free of wrap-around, and the sums
-are whole numbers, so rounding makes them exact. S2(0) is the porosity; far apart, S2 tends to its square.
+The pair counts themselves, and S2, stand in ``two_point``; this module sums them up.
 
 References
 ----------
-Debye, Anderson and Brumberger, J. Appl. Phys. 28 (1957) 679; Torquato, Random Heterogeneous Materials (2002), chapter 2;
-Padfield, IEEE Trans. Image Process. 21 (2012) 2706 (masked correlation by Fourier transforms).
+Debye, Anderson and Brumberger, J. Appl. Phys. 28 (1957) 679; Torquato, Random Heterogeneous Materials (2002), chapter 2.
 """
 
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
 import numpy.typing as npt
-import scipy.fft
 
+from poroscan.measure.integral_range import integral_range
 from poroscan.measure.part import Part, undefined
 from poroscan.measure.settings import MeasureSettings
+from poroscan.measure.two_point import RadialCorrelation, TwoPoint, correlation_length, radial_average, two_point
 from poroscan.measure.uncertainty import block_sums, t_quantile
 from poroscan.quantities import Curve, Estimate
 from poroscan.section import Section
@@ -33,165 +26,18 @@ from poroscan.section import Section
 if TYPE_CHECKING:
     from poroscan.measure.shared import Shared
 
-BoolArray = npt.NDArray[np.bool_]
+__all__ = [
+    "RadialCorrelation",
+    "TwoPoint",
+    "anisotropy",
+    "correlation_length",
+    "correlation_length_estimate",
+    "part",
+    "radial_average",
+    "two_point",
+]
+
 Float = npt.NDArray[np.float64]
-
-#: Columns of the spectrum handled at a time: bounds the working memory, and is wide enough for vector instructions.
-_CHUNK = 64
-
-
-@dataclass(frozen=True, eq=False)
-class TwoPoint:
-    """Exact pair counts at every lag of one half-space; the other half mirrors it.
-
-    Parameters
-    ----------
-    hits, pairs
-        int64 arrays: pore–pore pairs and all pairs inside the outline. Lags run from −n to +n along every axis but the last but
-        one, where they run from 0 to n (S2(−h) = S2(h)).
-    reach
-        The largest lag n along each axis.
-    """
-
-    hits: npt.NDArray[np.int64]
-    pairs: npt.NDArray[np.int64]
-    reach: tuple[int, ...]
-
-    @property
-    def porosity(self) -> float:
-        """S2 at lag zero."""
-        return float(self.hits[self.zero] / self.pairs[self.zero])
-
-    @property
-    def zero(self) -> tuple[int, ...]:
-        """Index of lag zero."""
-        half = len(self.reach) - 2
-        return tuple(0 if axis == half else n for axis, n in enumerate(self.reach))
-
-    @property
-    def s2(self) -> Float:
-        """S2 at every lag; NaN where no pair of points is that far apart."""
-        return _ratio(self.hits, self.pairs)
-
-    def axis(self, axis: int) -> tuple[Float, npt.NDArray[np.int64]]:
-        """S2 and pair counts along one array axis, lags 0…reach[axis]."""
-        index: list[int | slice] = list(self.zero)
-        index[axis] = slice(self.zero[axis], None)
-        return _ratio(self.hits[tuple(index)], self.pairs[tuple(index)]), self.pairs[tuple(index)]
-
-    def multiplicity(self) -> npt.NDArray[np.int64]:
-        """2 for lags that stand for their mirror image too, 1 for lags that are listed with it (half-axis lag 0)."""
-        shape = [1] * len(self.reach)
-        half = len(self.reach) - 2
-        shape[half] = self.reach[half] + 1
-        return np.where(np.arange(shape[half]) == 0, 1, 2).reshape(shape).astype(np.int64)
-
-    def distance(self) -> Float:
-        """Length of every lag in pixels, in the layout of ``hits``."""
-        half = len(self.reach) - 2
-        axes = [np.arange(0 if a == half else -n, n + 1, dtype=np.float64) for a, n in enumerate(self.reach)]
-        square: Float = np.zeros((1,) * len(axes))
-        for a, lags in enumerate(axes):
-            square = square + (lags**2).reshape([-1 if b == a else 1 for b in range(len(axes))])
-        return np.sqrt(square, out=square)
-
-
-@dataclass(frozen=True, eq=False)
-class RadialCorrelation:
-    """S2 averaged over all directions.
-
-    Parameters
-    ----------
-    r
-        Mean length of the lags of each ring, pixels; ring k holds lags of length k − ½ … k + ½.
-    s2
-        Pair-weighted mean of S2 over the ring.
-    pairs
-        Pairs of points in the ring (each pair once for either order).
-    """
-
-    r: Float
-    s2: Float
-    pairs: Float
-
-    @property
-    def covariance(self) -> Float:
-        """S2 less the square of the porosity."""
-        return np.asarray(self.s2 - self.s2[0] ** 2)
-
-
-def two_point(pores: BoolArray, particle: BoolArray, *, max_lag: float) -> TwoPoint:
-    """Exact two-point pair counts of the pores inside an outline.
-
-    Parameters
-    ----------
-    pores, particle
-        bool masks of one shape, 2-D or 3-D; pores lie inside the particle.
-    max_lag
-        Largest lag along each axis in pixels (cut to the size of the array).
-
-    Returns
-    -------
-    TwoPoint
-
-    Raises
-    ------
-    ValueError
-        If the masks are not bool, differ in shape, are not 2-D or 3-D, the particle is empty, or pores lie outside it.
-
-    Notes
-    -----
-    Transforms, forward e^{−2πi kx/M}: real along the last axis, then complex along the others in slabs of columns; the power
-    spectrum is real, so its inverse needs only half a transform. Double precision keeps the error of a sum of N ones
-    near 1e-15 N, far below the ½ that rounding allows; single precision would not for pictures above about 1000².
-    """
-    check_masks(pores, particle)
-    if not max_lag >= 0:
-        raise ValueError(f"max_lag must be a number of pixels of at least 0, not {max_lag!r}")
-    pores, particle = _trim(pores, particle)
-    reach = tuple(min(int(max_lag), n - 1) for n in particle.shape)
-    size = tuple(
-        scipy.fft.next_fast_len(n + lag, real=axis == particle.ndim - 1)
-        for axis, (n, lag) in enumerate(zip(particle.shape, reach, strict=True))
-    )
-    hits = _autocorrelation(pores, reach=reach, size=size)
-    pairs = _autocorrelation(particle, reach=reach, size=size)
-    return TwoPoint(hits, pairs, reach)
-
-
-def radial_average(counts: TwoPoint, *, max_lag: float | None = None) -> RadialCorrelation:
-    """Average over directions: rings one pixel wide, hits and pairs added up before dividing.
-
-    Rings are complete only up to the shortest reach; longer lags are left out unless an axis has no extent at all.
-    """
-    wide = [n for n in counts.reach if n > 0] or [0]
-    top = min(wide) if max_lag is None else min(int(max_lag), min(wide))
-    distance = counts.distance()
-    ring = np.rint(distance).astype(np.intp)
-    np.minimum(ring, top + 1, out=ring)
-    weight = counts.multiplicity()
-    pairs = np.bincount(ring.ravel(), (counts.pairs * weight).ravel(), top + 2)[:-1].astype(np.float64)
-    hits = np.bincount(ring.ravel(), (counts.hits * weight).ravel(), top + 2)[:-1]
-    distance *= counts.pairs * weight
-    length = np.bincount(ring.ravel(), distance.ravel(), top + 2)[:-1]
-    return RadialCorrelation(_ratio(length, pairs), _ratio(hits, pairs), pairs)
-
-
-def correlation_length(radial: RadialCorrelation) -> float:
-    """Distance at which the covariance S2(r) − φ² has fallen to 1/e of its value at zero, pixels (linear between rings).
-
-    For a Debye medium this is the length a of exp(−r/a). NaN where there are no pores or no walls, or the covariance
-    does not fall that far within the lags measured.
-    """
-    c = radial.covariance
-    if not c[0] > 0:
-        return math.nan
-    below = np.flatnonzero(~(c > c[0] / math.e))
-    if below.size == 0 or not math.isfinite(c[below[0]]):
-        return math.nan
-    k = int(below[0])
-    share = (c[k - 1] - c[0] / math.e) / (c[k - 1] - c[k])
-    return float(radial.r[k - 1] + share * (radial.r[k] - radial.r[k - 1]))
 
 
 def correlation_length_estimate(
@@ -216,68 +62,39 @@ def correlation_length_estimate(
     return Estimate(length, length / factor, length * factor, {"sampling": sd}), True
 
 
+def anisotropy(counts: TwoPoint) -> float:
+    """Correlation length along the rows axis (down) over that along the columns axis (across); NaN where either is."""
+    ndim = len(counts.reach)
+    lengths = []
+    for axis in (ndim - 2, ndim - 1):
+        s2, pairs = counts.axis(axis)
+        lengths.append(
+            correlation_length(RadialCorrelation(np.arange(s2.size, dtype=np.float64), s2, pairs.astype(float)))
+        )
+    return lengths[0] / lengths[1]
+
+
 def part(section: Section, settings: MeasureSettings, *, shared: Shared, rng: np.random.Generator) -> Part:
-    """Curves s2, s2_rows, s2_columns (and s2_planes in 3-D) and the correlation length."""
+    """Correlation length, integral range, anisotropy; curves s2, s2_rows, s2_columns (and s2_planes in 3-D)."""
+    range_name = "integral_range" if section.ndim == 2 else "integral_range_3d"
     if shared.n_pores in (0, shared.n_particle):
-        return undefined(("correlation_length",))
+        return undefined(("correlation_length", range_name, "s2_anisotropy"))
     counts = shared.two_point
     radial = radial_average(counts)
-    estimate, enough = correlation_length_estimate(
+    length, enough = correlation_length_estimate(
         section, radial, blocks=shared.blocks, inflation=shared.block_inflation
     )
+    estimates = {
+        "correlation_length": length,
+        range_name: Estimate(integral_range(counts).value),
+        "s2_anisotropy": Estimate(anisotropy(counts)),
+    }
     names = ("s2_rows", "s2_columns") if section.ndim == 2 else ("s2_planes", "s2_rows", "s2_columns")
     curves = [_curve("s2", radial.r, radial.s2)]
     for axis, name in enumerate(names):
         s2, _ = counts.axis(axis)
         curves.append(_curve(name, np.arange(s2.size, dtype=np.float64), s2))
-    return Part({"correlation_length": estimate}, tuple(curves), () if enough else ("few_blocks",))
-
-
-def check_masks(pores: BoolArray, particle: BoolArray) -> None:
-    """Raise ValueError unless both are bool masks of one 2-D or 3-D shape, the particle not empty, the pores inside it."""
-    for name, mask in (("pores", pores), ("particle", particle)):
-        if not isinstance(mask, np.ndarray) or mask.dtype != np.bool_:
-            raise ValueError(f"{name} must be a bool array (use array.astype(bool)), not {_kind(mask)}")
-    if pores.shape != particle.shape or particle.ndim not in (2, 3):
-        raise ValueError(
-            f"pores and particle must be 2-D or 3-D and of one shape, not {pores.shape} and {particle.shape}"
-        )
-    if not particle.any():
-        raise ValueError("particle is empty: no pixel lies inside the outline")
-    if bool((pores & ~particle).any()):
-        raise ValueError("pores has pixels outside particle (use pores & particle)")
-
-
-def _autocorrelation(mask: BoolArray, *, reach: tuple[int, ...], size: tuple[int, ...]) -> npt.NDArray[np.int64]:
-    """Σ_x m(x) m(x+h) as whole numbers for the lags of ``reach``, in the layout of TwoPoint."""
-    last = mask.ndim - 1
-    others = tuple(range(last))
-    rows = scipy.fft.rfft(mask.astype(np.float64), n=size[-1], axis=last)
-    lags = tuple(n + 1 if a == last - 1 else 2 * n + 1 for a, n in enumerate(reach[:-1]))
-    half = np.empty((*lags, rows.shape[-1]), np.complex128)
-    for start in range(0, rows.shape[-1], _CHUNK):
-        chunk = slice(start, start + _CHUNK)
-        spectrum = scipy.fft.fftn(np.ascontiguousarray(rows[..., chunk]), s=size[:-1], axes=others, overwrite_x=True)
-        power = np.square(spectrum.real)
-        power += np.square(spectrum.imag)
-        # The inverse of a real spectrum is the conjugate of its forward real transform.
-        half[..., chunk] = _keep(scipy.fft.rfftn(power, axes=others), reach)
-    del rows
-    half /= math.prod(size[:-1])
-    np.conjugate(half, out=half)
-    full = scipy.fft.irfft(half, n=size[-1], axis=last, overwrite_x=True)
-    n = reach[-1]
-    kept = np.concatenate([full[..., full.shape[-1] - n :], full[..., : n + 1]], axis=last)
-    return np.rint(kept, out=kept).astype(np.int64)
-
-
-def _keep(spectrum: npt.NDArray[np.complex128], reach: tuple[int, ...]) -> npt.NDArray[np.complex128]:
-    """Lags 0…n of the half axis; in 3-D, −n…n of the first axis."""
-    if len(reach) == 2:
-        return spectrum[: reach[0] + 1]
-    n, m = reach[0], reach[1]
-    planes = spectrum.shape[0]
-    return np.concatenate([spectrum[planes - n :, : m + 1], spectrum[: n + 1, : m + 1]])
+    return Part(estimates, tuple(curves), () if enough else ("few_blocks",))
 
 
 def _influence(section: Section, lag: int, phi: float, blocks: npt.NDArray[np.int32]) -> tuple[float, float]:
@@ -306,26 +123,7 @@ def _shift(axis: int, lag: int, ndim: int) -> tuple[tuple[slice, ...], tuple[sli
     return tuple(a), tuple(b)
 
 
-def _trim(pores: BoolArray, particle: BoolArray) -> tuple[BoolArray, BoolArray]:
-    """Cut both to the bounding box of the particle: pairs outside it count nothing."""
-    box = []
-    for axis in range(particle.ndim):
-        used = np.flatnonzero(particle.any(axis=tuple(a for a in range(particle.ndim) if a != axis)))
-        box.append(slice(int(used[0]), int(used[-1]) + 1))
-    return pores[tuple(box)], particle[tuple(box)]
-
-
-def _ratio(a: npt.NDArray[np.generic], b: npt.NDArray[np.generic]) -> Float:
-    out = np.full(np.shape(b), math.nan)
-    np.divide(a, b, out=out, where=np.asarray(b) > 0)
-    return out
-
-
 def _curve(name: str, x: Float, y: Float) -> Curve:
     good = np.isfinite(y)
     unknown = np.full(int(good.sum()), math.nan)
     return Curve(name, x[good], y[good], unknown, unknown)
-
-
-def _kind(value: object) -> str:
-    return f"{value.dtype} array" if isinstance(value, np.ndarray) else type(value).__name__

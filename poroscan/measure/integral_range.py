@@ -22,7 +22,7 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-from poroscan.measure.correlation import RadialCorrelation, TwoPoint, correlation_length, radial_average
+from poroscan.measure.two_point import RadialCorrelation, TwoPoint, correlation_length, radial_average
 
 Float = npt.NDArray[np.float64]
 

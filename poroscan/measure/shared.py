@@ -9,9 +9,9 @@ import edt
 import numpy as np
 import numpy.typing as npt
 
-from poroscan.measure.correlation import TwoPoint, radial_average, two_point
 from poroscan.measure.integral_range import block_inflation
 from poroscan.measure.settings import MeasureSettings
+from poroscan.measure.two_point import TwoPoint, radial_average, two_point
 from poroscan.section import BoolArray, Section
 
 Float32 = npt.NDArray[np.float32]
