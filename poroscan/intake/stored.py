@@ -17,11 +17,22 @@ _ORIENTATIONS: Mapping[int, tuple[bool, int]] = MappingProxyType(
 
 @dataclass(frozen=True)
 class Resolution:
-    """Resolution tags of a file: micrometres per pixel along columns (x) and rows (y), as they stand."""
+    """Resolution tags of a file.
+
+    Parameters
+    ----------
+    x_um, y_um
+        Micrometres per pixel along a row and along a column, as the tags say.
+    words
+        The tag for people.
+    stated_in_words
+        True where the unit stands as a word in the file's description.
+    """
 
     x_um: float
     y_um: float
     words: str
+    stated_in_words: bool = False
 
 
 @dataclass(frozen=True, eq=False)

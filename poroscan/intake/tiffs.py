@@ -220,11 +220,12 @@ def _resolution(page: Any) -> Resolution | None:
     if not (np.isfinite(x) and np.isfinite(y) and x > 0 and y > 0):
         return None
     unit = _number(page, 296, 2)
-    um = _UM_PER_UNIT.get(unit) or _unit_of_description(page)
-    if um is None:
-        return None
-    words = {2: "pixels per inch", 3: "pixels per cm"}.get(unit, "pixels per unit of the description")
-    return Resolution(um / x, um / y, f"{x:.6g} {words}")
+    worded = _unit_of_description(page)
+    if worded is not None and unit not in (2, 3):
+        return Resolution(worded / x, worded / y, f"{x:.6g} pixels per unit of the description", stated_in_words=True)
+    um = _UM_PER_UNIT.get(unit)
+    words = {2: "pixels per inch", 3: "pixels per cm"}.get(unit, "")
+    return Resolution(um / x, um / y, f"{x:.6g} {words}") if um else None
 
 
 def _unit_of_description(page: Any) -> float | None:
