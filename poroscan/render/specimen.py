@@ -8,6 +8,8 @@ half-width a at depth z the solid-angle share 1 − z/√(z² + a²).
 
 from __future__ import annotations
 
+import math
+
 import numpy as np
 import numpy.typing as npt
 from edt import edt
@@ -113,7 +115,7 @@ def _relief(depth: FloatImage, pores: BoolArray, settings: RenderSettings) -> Fl
 def _marks(shape: tuple[int, ...], rng: np.random.Generator) -> FloatImage:
     """Parallel knife marks in a random direction, zero mean and about unit variance."""
     angle = rng.uniform(0, np.pi)
-    length = int(np.hypot(*shape)) + 8
+    length = int(math.hypot(*shape)) + 8
     profile = gaussian_filter1d(rng.standard_normal(length), 1.5, mode="wrap")
     profile /= max(float(profile.std()), 1e-12)
     rows, columns = np.indices(shape)

@@ -178,7 +178,7 @@ def closed_cells(
     wall
         Least wall between two cells, px.
     density
-        Map of ``shape`` with values 0…1: relative chance that a cell is kept at its place.
+        Map of ``shape`` with values 0…1: chance that a cell, once placed, is kept.
     largest
         Diameters over this are not drawn, px; None for three geometric deviations over the median.
 
@@ -196,21 +196,19 @@ def closed_cells(
     cap = largest if largest is not None else diameter * spread**3
     drawn = diameter * np.exp(np.log(spread) * rng.standard_normal(number))
     radii = np.sort(np.minimum(drawn, cap))[::-1] / 2
-    cells = _without_overlap(shape, radii=radii, wall=wall, density=density, rng=rng)
+    cells = _without_overlap(shape, radii=radii, wall=wall, rng=rng)
+    if density is not None:
+        at = cells[:, :2].astype(int)
+        cells = cells[rng.uniform(size=len(cells)) < density[at[:, 0], at[:, 1]]]
     cells = _up_to_area(cells, target=porosity * shape[0] * shape[1], rng=rng)
     return paint_discs(shape, centres=cells[:, :2], radii=cells[:, 2]), cells
 
 
-def _without_overlap(
-    shape: Sequence[int], *, radii: FloatImage, wall: float, density: FloatImage | None, rng: np.random.Generator
-) -> FloatImage:
+def _without_overlap(shape: Sequence[int], *, radii: FloatImage, wall: float, rng: np.random.Generator) -> FloatImage:
     placed = np.empty((len(radii), 3))
     count = 0
     for radius in radii:
         tries = rng.uniform(0, shape, size=(60, 2))
-        if density is not None:
-            kept = rng.uniform(size=60) < density[tries[:, 0].astype(int), tries[:, 1].astype(int)]
-            tries = tries[kept]
         others = placed[:count]
         for trial in tries:
             gap = np.hypot(others[:, 0] - trial[0], others[:, 1] - trial[1]) - others[:, 2] - radius
