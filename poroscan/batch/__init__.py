@@ -1,1 +1,11 @@
-"""From a folder of pictures to a run folder."""
+"""From a folder to a run: many pictures, several processes, one folder of results.
+
+recipe     settings of a run, from TOML
+names      safe names for folders, cells and lines
+image      one picture: read, segmented, measured, drawn
+store      what a run folder holds and how it is written
+workers    processes, and what happens when one dies
+tables     columns of the tables, and how they are put together
+summary    one row per batch
+scan       the whole run
+"""

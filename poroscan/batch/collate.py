@@ -1,0 +1,81 @@
+"""The tables of a run, put together from what was committed picture by picture.
+
+One picture is held in memory at a time, and the particles of one batch.
+"""
+
+from __future__ import annotations
+
+import contextlib
+import itertools
+from collections.abc import Iterable, Sequence
+from typing import Any
+
+import pyarrow as pa
+import pyarrow.parquet as pq
+
+from poroscan.batch.image import ImageOutcome
+from poroscan.batch.store import RunFolder
+from poroscan.batch.summary import BatchCollector, batch_columns
+from poroscan.batch.tables import (
+    CURVE_SCHEMA,
+    ParquetStream,
+    csv_row,
+    csv_writer,
+    particle_columns,
+    particle_schema,
+    pore_schema,
+)
+from poroscan.errors import StoreError
+
+
+def collate(run: RunFolder, outcomes: Sequence[ImageOutcome]) -> None:
+    """Write particles.csv and .parquet, pores.parquet, curves.parquet and batches.csv.
+
+    Parameters
+    ----------
+    run
+        Run folder.
+    outcomes
+        Pictures in the order of the tables, those of one batch together.
+
+    Raises
+    ------
+    StoreError
+        If a table cannot be written, or a committed picture has gone.
+    """
+    _particles_and_batches(run, outcomes)
+    for file_name, schema in (("pores.parquet", pore_schema()), ("curves.parquet", CURVE_SCHEMA)):
+        with run.replacing(file_name) as path, contextlib.closing(ParquetStream(path, schema)) as stream:
+            for outcome in outcomes:
+                if outcome.outcome == "measured":
+                    stream.add(pq.read_table(run.images / outcome.name / file_name, memory_map=False))
+
+
+def _particles_and_batches(run: RunFolder, outcomes: Iterable[ImageOutcome]) -> None:
+    with contextlib.ExitStack() as stack:
+        particles_csv = _open_csv(stack, run, "particles.csv", particle_columns())
+        batches_csv = _open_csv(stack, run, "batches.csv", batch_columns())
+        path = stack.enter_context(run.replacing("particles.parquet"))
+        stream = stack.enter_context(contextlib.closing(ParquetStream(path, particle_schema())))
+        for batch, members in itertools.groupby(outcomes, key=lambda o: o.batch):
+            collector = BatchCollector(batch)
+            for outcome in members:
+                rows = _rows(run, outcome)
+                collector.add_image(rows, measured=outcome.outcome == "measured")
+                particles_csv.writerows(map(csv_row, rows))
+                if rows:
+                    stream.add(pa.Table.from_pylist(rows, schema=particle_schema()))
+            batches_csv.writerow(csv_row(collector.row()))
+
+
+def _open_csv(stack: contextlib.ExitStack, run: RunFolder, name: str, columns: Sequence[str]) -> Any:
+    path = stack.enter_context(run.replacing(name))
+    return csv_writer(stack.enter_context(path.open("w", encoding="utf-8", newline="")), columns)
+
+
+def _rows(run: RunFolder, outcome: ImageOutcome) -> list[dict[str, Any]]:
+    entry = run.entry(outcome.name)
+    if entry is None:
+        raise StoreError(f"{run.images / outcome.name} has gone or is damaged; run the same command again")
+    rows: list[dict[str, Any]] = entry["rows"]
+    return rows

@@ -1,0 +1,172 @@
+"""One row per batch: mean over its particles with a 95 % interval, counts, and what was left out.
+
+Particles cut by the frame are left out; the others carry their frame weight, which makes up for large particles being cut more
+often (Miles 1974; Lantuéjoul 1980). Directions are not averaged.
+"""
+
+from __future__ import annotations
+
+import math
+from collections import Counter
+from collections.abc import Iterator, Mapping, Sequence
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+import numpy.typing as npt
+
+from poroscan.quantities import CATALOGUE, Quantity
+
+#: Columns before the quantities.
+COUNT_COLUMNS = ("batch", "images", "images_measured", "particles", "particles_used", "particles_cut_by_frame")
+#: Columns after the quantities; those of regime and limits are filled once an atlas and limits are there.
+VERDICT_COLUMNS = ("regime", "regime_probability", "regime_set", "verdict", "flags")
+
+AVERAGED: tuple[Quantity, ...] = tuple(q for q in CATALOGUE if q.unit != "°")
+_VALUE_COLUMNS: tuple[str, ...] = tuple(k for q in AVERAGED for k in (q.key, q.pixel_key) if k)
+
+
+@dataclass(frozen=True)
+class BatchMean:
+    """Mean of one quantity over the particles of a batch.
+
+    Parameters
+    ----------
+    mean
+        Weighted mean; NaN where no particle has a value.
+    low, high
+        Ends of the 95 % interval of the mean; NaN with fewer than two particles.
+    sd
+        Standard deviation between particles; NaN with fewer than two.
+    number
+        Particles with a value.
+    """
+
+    mean: float
+    low: float
+    high: float
+    sd: float
+    number: int
+
+
+def batch_columns() -> tuple[str, ...]:
+    """All columns of batches.csv in order."""
+    columns = list(COUNT_COLUMNS)
+    for q in AVERAGED:
+        columns += [q.key, f"{q.key}_low", f"{q.key}_high", f"{q.key}_sd", f"{q.key}_n"]
+        columns += [q.pixel_key] if q.pixel_key else []
+    return (*columns, *VERDICT_COLUMNS)
+
+
+class BatchCollector:
+    """Gathers what a batch's row needs from its particles, a few numbers each.
+
+    Parameters
+    ----------
+    batch
+        Name of the batch.
+    """
+
+    def __init__(self, batch: str) -> None:
+        self._batch = batch
+        self._counts: Counter[str] = Counter()
+        self._values: list[npt.NDArray[np.float64]] = []
+        self._weights: list[float] = []
+        self._scales: set[float | None] = set()
+
+    def add_image(self, rows: Sequence[Mapping[str, Any]], *, measured: bool) -> None:
+        """Take the rows of one picture.
+
+        Parameters
+        ----------
+        rows
+            Its rows of particles.csv; one without a particle is passed over.
+        measured
+            Whether a particle was measured in it.
+        """
+        self._counts["images"] += 1
+        self._counts["images_measured"] += measured
+        for row in rows:
+            if row["particle"] is None:
+                continue
+            self._counts["particles"] += 1
+            if not is_used(row):
+                self._counts["particles_cut_by_frame"] += 1
+                continue
+            self._counts["particles_used"] += 1
+            self._values.append(np.array([_number(row[column]) for column in _VALUE_COLUMNS]))
+            self._weights.append(_weight(row))
+            self._scales.add(row["pixel_size_um"])
+
+    def row(self) -> dict[str, Any]:
+        """The row of batches.csv."""
+        row: dict[str, Any] = {"batch": self._batch} | {c: self._counts[c] for c in COUNT_COLUMNS[1:]}
+        table = np.array(self._values, dtype=np.float64).reshape(len(self._values), len(_VALUE_COLUMNS))
+        weights = np.array(self._weights, dtype=np.float64)
+        means = {
+            column: weighted_mean(table[good, j], weights[good])
+            for j, column in enumerate(_VALUE_COLUMNS)
+            for good in [np.isfinite(table[:, j])]
+        }
+        for q in AVERAGED:
+            row.update(_cells(q, means, one_scale=len(self._scales) <= 1))
+        flags = ["no_pixel_size"] if None in self._scales else []
+        row |= dict.fromkeys(VERDICT_COLUMNS) | {"flags": " ".join([*flags, "no_atlas"])}
+        return {column: row[column] for column in batch_columns()}
+
+
+def is_used(row: Mapping[str, Any]) -> bool:
+    """True where a particle counts in its batch: it is not a whole-particle view that the frame cuts.
+
+    Parameters
+    ----------
+    row
+        A row of particles.csv.
+    """
+    return row["view"] in ("edge", "interior") or not row["touches_frame"]
+
+
+def weighted_mean(values: npt.NDArray[np.float64], weights: npt.NDArray[np.float64]) -> BatchMean:
+    """Weighted mean with a 95 % t-interval.
+
+    The number of particles that counts is Kish's effective one, (Σw)²/Σw², which is the plain number for equal weights.
+
+    Parameters
+    ----------
+    values
+        Finite values, one per particle.
+    weights
+        Positive weights of the same length.
+    """
+    from scipy.stats import t
+
+    n = len(values)
+    if n == 0:
+        return BatchMean(math.nan, math.nan, math.nan, math.nan, 0)
+    mean = float(np.average(values, weights=weights))
+    effective = float(weights.sum() ** 2 / (weights**2).sum())
+    if n < 2 or effective <= 1.0:
+        return BatchMean(mean, math.nan, math.nan, math.nan, n)
+    variance = float(np.average((values - mean) ** 2, weights=weights)) * effective / (effective - 1.0)
+    half = float(t.ppf(0.975, effective - 1.0)) * math.sqrt(variance / effective)
+    return BatchMean(mean, mean - half, mean + half, math.sqrt(variance), n)
+
+
+def _cells(q: Quantity, means: Mapping[str, BatchMean], *, one_scale: bool) -> Iterator[tuple[str, Any]]:
+    result = means[q.key]
+    yield q.key, result.mean
+    yield f"{q.key}_low", result.low
+    yield f"{q.key}_high", result.high
+    yield f"{q.key}_sd", result.sd
+    yield f"{q.key}_n", result.number
+    if q.pixel_key:  # pixels of different size are not averaged
+        yield q.pixel_key, means[q.pixel_key].mean if one_scale else math.nan
+
+
+def _number(value: Any) -> float:
+    return math.nan if value is None else float(value)
+
+
+def _weight(row: Mapping[str, Any]) -> float:
+    weight = row["frame_weight"]
+    return 1.0 if weight is None or not math.isfinite(weight) or weight <= 0 else float(weight)
