@@ -127,13 +127,13 @@ def _graded(place: Place, *, centre: float = 0.6, rim: float = 0.2, spacing: flo
     return pores, {"porosity_expected": centre + 2 * (rim - centre) / 3}
 
 
-def _discs(place: Place, *, porosity: float = 0.35, radius: float = 9.0) -> Filled:
-    pores = structures.boolean_discs(place.shape, porosity=porosity, radius=radius, rng=place.rng)
+def _discs(place: Place, *, porosity: float = 0.35, pore_radius: float = 9.0) -> Filled:
+    pores = structures.boolean_discs(place.shape, porosity=porosity, radius=pore_radius, rng=place.rng)
     return pores, {"porosity_expected": porosity}
 
 
-def _spheres(place: Place, *, porosity: float = 0.35, radius: float = 12.0) -> Filled:
-    pores = structures.boolean_spheres(place.shape, porosity=porosity, radius=radius, rng=place.rng)
+def _spheres(place: Place, *, porosity: float = 0.35, pore_radius: float = 12.0) -> Filled:
+    pores = structures.boolean_spheres(place.shape, porosity=porosity, radius=pore_radius, rng=place.rng)
     return pores, {"porosity_expected": porosity}
 
 

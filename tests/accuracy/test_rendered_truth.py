@@ -1,0 +1,195 @@
+"""Accuracy on rendered truth: from the written picture to the measured values, against the exact masks.
+
+Truth of porosity, diameter, pore D50, skin and polar direction is what ``measure_section`` gives on the exact masks (what is
+tested here is reading and segmentation), and the closed form where the structure has one.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from pathlib import Path
+
+import numpy as np
+import pytest
+from rendered_cases import Case, draw_case
+
+from poroscan.intake import load_picture
+from poroscan.measure import Measurement, measure_section
+from poroscan.render.writing import write_tiff
+from poroscan.section import PixelSize, Section
+from poroscan.segment import segment_picture
+
+#: Limits of the accuracy table.
+BIAS, SPREAD_95 = 0.01, 0.03
+DIAMETER, POSITION_D50 = 0.01, 0.05
+SKIN_PX, SKIN_RELATIVE = 2.0, 0.05
+POLAR_DEG, POLAR_FROM = 10.0, 0.1
+
+
+@dataclass(frozen=True)
+class Row:
+    """Errors of one particle (found minus true); NaN where the truth is not defined."""
+
+    case: str
+    structure: str
+    porosity_true: float
+    porosity: float
+    diameter: float
+    pore_d50: float
+    skin_true: float
+    skin: float
+    polar: float
+
+
+@dataclass(frozen=True)
+class Outcome:
+    rows: tuple[Row, ...]
+    missed: tuple[str, ...]
+    invented: tuple[str, ...]
+
+
+def measure_case(case: Case, folder: Path) -> Outcome:
+    """Write the picture, read it, segment it, measure it, and set it against its truth."""
+    path = folder / f"{case.name}.tif"
+    write_tiff(path, case.rendered.grey, pixel_size_um=case.rendered.pixel_size_um)
+    picture = load_picture(path)
+    assert picture.banner_rows == case.rendered.banner_rows
+    assert picture.pixel_size.um == pytest.approx(case.rendered.pixel_size_um, rel=1e-6)
+    found = segment_picture(picture)
+    labels = case.rendered.labels
+    partner = _partners(labels, found.labels)
+    rows, missed, used = [], [], set()
+    for number, structure in enumerate(case.structures, start=1):
+        other = partner.get(number)
+        if other is None:
+            missed.append(f"{case.name}/{structure}")
+            continue
+        used.add(other)
+        truth = measure_section(_section(case.rendered.pores, labels, number, picture.pixel_size), rng=0)
+        mine = measure_section(_section(found.pores, found.labels, other, picture.pixel_size), rng=0)
+        rows.append(_row(case, structure, truth, mine))
+    numbers = set(np.unique(found.labels[found.labels > 0]).tolist())
+    invented = tuple(f"{case.name}/{n}" for n in sorted(numbers - used))
+    return Outcome(tuple(rows), tuple(missed), invented)
+
+
+def _partners(true: np.ndarray, found: np.ndarray) -> dict[int, int]:
+    """True number -> found number whose overlap is at least half of their union."""
+    pairs = {}
+    for number in np.unique(true[true > 0]).tolist():
+        inside = true == number
+        candidates, counts = np.unique(found[inside & (found > 0)], return_counts=True)
+        if len(candidates) == 0:
+            continue
+        best = int(candidates[np.argmax(counts)])
+        union = int((inside | (found == best)).sum())
+        if counts.max() >= 0.5 * union:
+            pairs[number] = best
+    return pairs
+
+
+def _section(pores: np.ndarray, labels: np.ndarray, number: int, pixel_size: PixelSize) -> Section:
+    inside = labels == number
+    rows, columns = np.nonzero(inside)
+    window = (
+        slice(max(rows.min() - 2, 0), rows.max() + 3),
+        slice(max(columns.min() - 2, 0), columns.max() + 3),
+    )
+    particle = inside[window]
+    return Section(pores=(pores[window] & particle), particle=particle, pixel_size=pixel_size, name=str(number))
+
+
+def _row(case: Case, structure: str, truth: Measurement, mine: Measurement) -> Row:
+    def value(of: Measurement, base: str) -> float:
+        return of.record[base].value if base in of.record.estimates else math.nan
+
+    polar = math.nan
+    if value(truth, "polar_asymmetry") > POLAR_FROM:
+        turn = value(mine, "polar_direction") - value(truth, "polar_direction")
+        polar = abs((turn + 180) % 360 - 180)
+    true_d50 = value(truth, "pore_d50")
+    return Row(
+        case.name,
+        structure,
+        value(truth, "porosity"),
+        value(mine, "porosity") - value(truth, "porosity"),
+        value(mine, "equivalent_diameter") / value(truth, "equivalent_diameter") - 1,
+        value(mine, "pore_d50") / true_d50 - 1 if true_d50 > 0 else math.nan,
+        value(truth, "skin_thickness"),
+        value(mine, "skin_thickness") - value(truth, "skin_thickness"),
+        polar,
+    )
+
+
+def table(rows: tuple[Row, ...]) -> str:
+    """The rows as text, worst values last."""
+    lines = ["case      structure     porosity   error   diam.%   D50 %  skin px  error  polar°"]
+    lines += [
+        f"{r.case}  {r.structure:12s} {r.porosity_true:8.3f} {r.porosity:+8.3f} {100 * r.diameter:+7.2f} "
+        f"{100 * r.pore_d50:+7.1f} {r.skin_true:8.1f} {r.skin:+6.1f} {r.polar:7.1f}"
+        for r in rows
+    ]
+    errors = np.array([r.porosity for r in rows])
+    lines.append(
+        f"{len(rows)} particles: porosity bias {errors.mean():+.4f}, 95 % of |error| within "
+        f"{np.quantile(abs(errors), 0.95):.4f}, worst {abs(errors).max():.4f}; "
+        f"worst diameter {100 * _worst(r.diameter for r in rows):.2f} %, "
+        f"worst pore D50 {100 * _worst(r.pore_d50 for r in rows):.1f} %, worst skin {_worst(r.skin for r in rows):.1f} px, "
+        f"worst polar direction {_worst(r.polar for r in rows):.1f}°"
+    )
+    return "\n".join(lines)
+
+
+def _worst(values) -> float:
+    finite = [abs(v) for v in values if math.isfinite(v)]
+    return max(finite, default=0.0)
+
+
+def check(outcome: Outcome) -> None:
+    """The demands of the accuracy table."""
+    rows = outcome.rows
+    assert outcome.missed == ()
+    assert outcome.invented == ()
+    errors = np.array([r.porosity for r in rows])
+    assert abs(errors.mean()) <= BIAS
+    assert np.quantile(abs(errors), 0.95) <= SPREAD_95
+    outside = [f"{r.case}/{r.structure}: {words}" for r in rows for words in _beyond(r)]
+    assert outside == []
+
+
+def _beyond(r: Row) -> list[str]:
+    found = []
+    if not abs(r.diameter) <= DIAMETER:
+        found.append(f"diameter {100 * r.diameter:+.2f} %")
+    if abs(r.pore_d50) > POSITION_D50:
+        found.append(f"pore D50 {100 * r.pore_d50:+.1f} %")
+    if abs(r.skin) > max(SKIN_PX, SKIN_RELATIVE * r.skin_true):
+        found.append(f"skin {r.skin:+.1f} of {r.skin_true:.1f} px")
+    if r.polar > POLAR_DEG:
+        found.append(f"polar direction {r.polar:.1f}°")
+    return found
+
+
+def run_cases(indices: range, folder: Path, *, particles: int = 3) -> Outcome:
+    outcomes = [measure_case(draw_case(index, particles=particles), folder) for index in indices]
+    return Outcome(
+        tuple(r for o in outcomes for r in o.rows),
+        tuple(m for o in outcomes for m in o.missed),
+        tuple(i for o in outcomes for i in o.invented),
+    )
+
+
+def test_six_rendered_particles(tmp_path: Path) -> None:
+    outcome = run_cases(range(2), tmp_path)
+    print("\n" + table(outcome.rows))
+    check(outcome)
+
+
+@pytest.mark.slow
+def test_sixty_rendered_particles(tmp_path: Path) -> None:
+    """The table of the accuracy page: python -m pytest tests/accuracy -m slow -s."""
+    outcome = run_cases(range(22), tmp_path)
+    print("\n" + table(outcome.rows))
+    assert len(outcome.rows) >= 60
+    check(outcome)
