@@ -41,6 +41,13 @@ def gaussian_field(shape: tuple[int, ...], *, length: float, rng: np.random.Gene
     return np.asarray(sf.irfftn(noise * kernel, shape) / math.sqrt(float(np.mean(full))))
 
 
+def ring_cut(shape: tuple[int, ...], *, spacing: float, spread: float, rng: np.random.Generator) -> Bool:
+    """Level cut at one half of a Gaussian field whose spectrum is a Gaussian ring at 2π/spacing (relative width ``spread``)."""
+    centre = 2 * math.pi / spacing
+    spectrum = np.exp(-((np.sqrt(_q2(shape, half=True)) - centre) ** 2) / (4 * (spread * centre) ** 2))
+    return np.asarray(sf.irfftn(sf.rfftn(rng.standard_normal(shape)) * spectrum, shape) > 0)
+
+
 def _q2(shape: tuple[int, ...], *, half: bool) -> npt.NDArray[np.float64]:
     last = np.fft.rfftfreq(shape[-1]) if half else np.fft.fftfreq(shape[-1])
     axes = np.meshgrid(*[np.fft.fftfreq(s) for s in shape[:-1]], last, indexing="ij", sparse=True)
