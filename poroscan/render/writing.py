@@ -90,6 +90,19 @@ def write_jpeg(path: Path, image: npt.NDArray[np.uint8], *, quality: int = 92) -
     Image.fromarray(image).save(path, format="JPEG", quality=quality)
 
 
+def write_png(path: Path, image: npt.NDArray[np.uint8]) -> None:
+    """Write a grey PNG without any header of scale.
+
+    Parameters
+    ----------
+    path
+        File to write.
+    image
+        uint8 array (row, column).
+    """
+    Image.fromarray(image).save(path, format="PNG", optimize=True)
+
+
 def write_masks(folder: Path, name: str, rendered: Rendered) -> tuple[Path, Path]:
     """Write the true masks of a picture: ``NAME_particles.tif`` (numbers) and ``NAME_pores.png`` (255 is pore).
 
@@ -107,5 +120,5 @@ def write_masks(folder: Path, name: str, rendered: Rendered) -> tuple[Path, Path
     """
     particles, pores = folder / f"{name}_particles.tif", folder / f"{name}_pores.png"
     write_tiff(particles, rendered.labels.astype(np.uint16), pixel_size_um=rendered.pixel_size_um)
-    Image.fromarray(rendered.pores.astype(np.uint8) * 255).save(pores, format="PNG", optimize=True)
+    write_png(pores, rendered.pores.astype(np.uint8) * 255)
     return particles, pores
