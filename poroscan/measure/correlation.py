@@ -19,7 +19,7 @@ from poroscan.measure.integral_range import integral_range
 from poroscan.measure.part import Part, undefined
 from poroscan.measure.settings import MeasureSettings
 from poroscan.measure.two_point import RadialCorrelation, TwoPoint, correlation_length, radial_average, two_point
-from poroscan.measure.uncertainty import block_sums, t_quantile
+from poroscan.measure.uncertainty import block_linear, block_sums, estimate_of
 from poroscan.quantities import Curve, Estimate
 from poroscan.section import Section
 
@@ -53,13 +53,13 @@ def correlation_length_estimate(
         return Estimate(math.nan), True
     lag = max(1, round(length))
     phi = radial.s2[0]
-    influence, df = _influence(section, lag, float(phi), blocks)
-    slope = abs(float(np.gradient(radial.s2, radial.r)[min(lag, radial.r.size - 1)]))
-    if df < 4 or not slope > 0:
+    slope = float(np.gradient(radial.s2, radial.r)[min(lag, radial.r.size - 1)])
+    if not slope < 0:
         return Estimate(length), False
-    sd = math.sqrt(inflation * influence) / slope
-    factor = math.exp(t_quantile(df) * sd / length)  # symmetric on the logarithmic scale: a length is positive
-    return Estimate(length, length / factor, length * factor, {"sampling": sd}), True
+    influence, pixels = _influence(section, lag, float(phi), blocks)
+    # A length is positive: its interval is symmetric on the logarithmic scale.
+    result = block_linear(length, influence / abs(slope), pixels, inflation=inflation, scale="log")
+    return estimate_of(result), math.isfinite(result.sd)
 
 
 def anisotropy(counts: TwoPoint) -> float:
@@ -97,8 +97,8 @@ def part(section: Section, settings: MeasureSettings, *, shared: Shared, rng: np
     return Part(estimates, tuple(curves), () if enough else ("few_blocks",))
 
 
-def _influence(section: Section, lag: int, phi: float, blocks: npt.NDArray[np.int32]) -> tuple[float, float]:
-    """Variance of U = S2(lag) − φ² − (φ − φ²)/e from blocks, and its effective degrees of freedom."""
+def _influence(section: Section, lag: int, phi: float, blocks: npt.NDArray[np.int32]) -> tuple[Float, Float]:
+    """Contribution of each block to U = S2(lag) − φ² − (φ − φ²)/e, and the pixels of each block."""
     pixels = block_sums(blocks)
     pore = block_sums(blocks, section.pores) - phi * pixels
     n = pixels.size
@@ -109,12 +109,9 @@ def _influence(section: Section, lag: int, phi: float, blocks: npt.NDArray[np.in
         both = section.particle[b] & (near > 0)
         pairs += np.bincount(near[both], minlength=n + 1)[1:]
         hits += np.bincount(near[both & section.pores[a] & section.pores[b]], minlength=n + 1)[1:]
-    if pairs.sum() == 0:
-        return math.nan, 0.0
-    df = float(pixels.sum() ** 2 / np.square(pixels).sum() - 1)
-    s2 = hits.sum() / pairs.sum()
-    u = (hits - s2 * pairs) / pairs.sum() - (2 * phi + (1 - 2 * phi) / math.e) * pore / pixels.sum()
-    return float(np.sum(u**2 / (1 - pixels / pixels.sum() * (pixels.size > 1)))), df
+    total = max(float(pairs.sum()), 1.0)
+    u = (hits - hits.sum() / total * pairs) / total - (2 * phi + (1 - 2 * phi) / math.e) * pore / pixels.sum()
+    return np.asarray(u), pixels
 
 
 def _shift(axis: int, lag: int, ndim: int) -> tuple[tuple[slice, ...], tuple[slice, ...]]:

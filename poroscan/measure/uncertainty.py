@@ -117,13 +117,37 @@ def block_ratio(
     if total <= 0:
         return BlockEstimate(math.nan, math.nan, math.nan, math.nan, 0, 0.0)
     value = float(num.sum()) / total
-    df = total**2 / float(np.square(den).sum()) - 1
-    if df < LEAST_BLOCKS - 1:
-        return BlockEstimate(value, math.nan, math.nan, math.nan, num.size, df)
-    residual = num - value * den
-    sd = math.sqrt(inflation * float(np.sum(residual**2 / (1 - den / total)))) / total
+    return block_linear(value, (num - value * den) / total, den, level=level, inflation=inflation, scale=scale)
+
+
+def block_linear(
+    value: float,
+    influence: npt.NDArray[np.float64],
+    weights: npt.NDArray[np.float64],
+    *,
+    level: float = 0.95,
+    inflation: float = 1.0,
+    scale: Scale = "plain",
+) -> BlockEstimate:
+    """A smooth function of several ratios, from what each block contributes to it to first order (delta method).
+
+    Parameters
+    ----------
+    value
+        The estimate.
+    influence
+        Contribution of each block: the gradient times that block's residual sums; adds up to zero over the section.
+    weights
+        Pixels (or another size) of each block, for the leverage correction and the degrees of freedom.
+    """
+    total = float(weights.sum())
+    n = int(np.count_nonzero(weights))
+    df = total**2 / float(np.square(weights).sum()) - 1 if total > 0 else 0.0
+    if df < LEAST_BLOCKS - 1 or not math.isfinite(value):
+        return BlockEstimate(value, math.nan, math.nan, math.nan, n, df)
+    sd = math.sqrt(inflation * float(np.sum(influence**2 / (1 - weights / total))))
     low, high = symmetric_on(value, t_quantile(df, level=level) * sd, scale=scale)
-    return BlockEstimate(value, sd, low, high, num.size, df)
+    return BlockEstimate(value, sd, low, high, n, df)
 
 
 def block_quantile(
@@ -256,6 +280,35 @@ def expanded(
     combined = combine(components, df=df, level=level)
     low, high = symmetric_on(value, combined.half_width, scale=scale) if math.isfinite(value) else (math.nan, math.nan)
     return Estimate(value, low, high, MappingProxyType(dict(components)))
+
+
+def estimate_of(
+    block: BlockEstimate, *, threshold: float | None = None, scale: Scale = "plain", level: float = 0.95
+) -> Estimate:
+    """Estimate of the catalogue from a block estimate, with the threshold's component added where there is one.
+
+    Parameters
+    ----------
+    block
+        Value and sampling uncertainty.
+    threshold
+        Standard uncertainty from the threshold band; None where there was no threshold.
+    scale
+        Scale on which the combined interval is symmetric.
+    """
+    if threshold is None:
+        parts = {} if math.isnan(block.sd) else {"sampling": block.sd}
+        return Estimate(block.value, block.low, block.high, MappingProxyType(parts))
+    components = {"sampling": block.sd, "threshold": threshold}
+    if not (math.isfinite(block.sd) and math.isfinite(threshold)):
+        known = {name: u for name, u in components.items() if math.isfinite(u)}
+        return Estimate(block.value, components=MappingProxyType(known))
+    return expanded(block.value, components, df={"sampling": block.df}, level=level, scale=scale)
+
+
+def threshold_sd(low: float, high: float) -> float:
+    """Standard uncertainty from the values at −1 and +1 standard uncertainty of the threshold: half their distance."""
+    return abs(high - low) / 2
 
 
 def _weighted_quantile(
