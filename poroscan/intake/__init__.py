@@ -22,6 +22,7 @@ from poroscan.intake.settings import IntakeSettings
 
 _PUBLIC = {
     "load_picture": "poroscan.intake.loading",
+    "inspect_picture": "poroscan.intake.loading",
     "list_inputs": "poroscan.intake.folders",
     "companions": "poroscan.intake.folders",
     "Companions": "poroscan.intake.folders",

@@ -24,15 +24,11 @@ class Grey:
         2-D float32 array, 0…1.
     notes, flags
         Words for people, and keys of ``quantities.FLAGS``.
-    clipped_low, clipped_high
-        Share of pixels at the black and at the white end of the file's grey scale.
     """
 
     values: npt.NDArray[np.float32]
     notes: tuple[str, ...] = ()
     flags: tuple[str, ...] = ()
-    clipped_low: float = 0.0
-    clipped_high: float = 0.0
 
 
 def to_luminance(samples: npt.NDArray, *, model: str) -> tuple[npt.NDArray, tuple[str, ...]]:
@@ -111,14 +107,7 @@ def _from_whole_numbers(values: npt.NDArray) -> Grey:
         grey.astype(np.float32, copy=False),
         tuple(notes),
         ("constant_picture",) if low == high else (),
-        float(np.count_nonzero(values == 0)) / values.size,
-        float(np.count_nonzero(values == (white if high > white // 2 else _full_scale(high)))) / values.size,
     )
-
-
-def _full_scale(high: int) -> int:
-    """White of a detector with fewer bits (4095 of a 12-bit one stored in 16), -1 where ``high`` is no such number."""
-    return high if high > 255 and (high + 1) & high == 0 else -1
 
 
 def _from_own_range(values: npt.NDArray) -> Grey:

@@ -1,0 +1,173 @@
+"""The data banner: the strip of text that many microscopes print under the picture.
+
+A banner is a strip at the bottom, (1) mostly of one or two flat grey values, (2) set off from the picture by an edge over
+its full width or by a line, (3) with letters in it, (4) none of whose marks runs on into the picture. A dark featureless
+bottom of a picture has no letters, so it stays.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+
+from poroscan.intake.lettering import Box, ink_boxes, letters, longest_line
+
+#: Largest share of the picture's rows that a banner may take.
+MAX_SHARE = 0.3
+
+_MIN_ROWS = 10
+_TOLERANCE = (1.5 / 255, 14.0 / 255)
+_MIN_LETTERS = 4
+_FLAT = 0.45  # share of flat pixels in a row of dense text
+_QUIET = 0.75  # share of flat pixels in the first rows of a banner
+_MAX_GAP = 6  # rows with few flat pixels that may interrupt a banner (rules, thick lines, JPEG rings)
+
+
+@dataclass(frozen=True, eq=False)
+class Strip:
+    """The flat strip at the bottom of a picture.
+
+    Parameters
+    ----------
+    levels
+        Its one or two flat grey values, on 0…1 of the picture's own range; the first is the background.
+    tolerance
+        How far a flat pixel may lie from its level.
+    flat
+        Share of flat pixels in every row of the picture.
+    """
+
+    levels: tuple[float, ...]
+    tolerance: float
+    flat: npt.NDArray[np.float64]
+
+
+def stretched(grey: npt.NDArray) -> npt.NDArray[np.float32]:
+    """Grey values on 0…1 of their own minimum and maximum (zeros where they are all equal)."""
+    low, high = float(grey.min()), float(grey.max())
+    if high <= low:
+        return np.zeros(grey.shape, np.float32)
+    return ((grey - low) / (high - low)).astype(np.float32)
+
+
+def find_banner(grey: npt.NDArray[np.float32]) -> int:
+    """Rows of the data banner at the bottom of a picture; 0 where there is none.
+
+    Parameters
+    ----------
+    grey
+        2-D array of grey values on any linear scale.
+    """
+    rows, columns = grey.shape
+    if rows < 3 * _MIN_ROWS or columns < 40:
+        return 0
+    deepest = min(rows - _MIN_ROWS, max(int(MAX_SHARE * rows), 2 * _MIN_ROWS))
+    bottom = stretched(grey)[rows - deepest :]
+    strip = _strip(bottom)
+    start = _flat_from(strip.flat)
+    for top in _edges(bottom, strip, start):
+        if deepest - top >= _MIN_ROWS and _is_banner(bottom[top:], strip, closed=True):
+            return deepest - top
+    return _banner_without_edge(bottom, strip, start)
+
+
+def _strip(bottom: npt.NDArray[np.float32]) -> Strip:
+    """Levels of the flat strip, from the lowest rows."""
+    lowest = bottom[-12:-1] if bottom.shape[0] > 12 else bottom
+    background, tolerance = _level(lowest)
+    rest = bottom[-_MIN_ROWS:]
+    rest = rest[np.abs(rest - background) > 0.15]
+    levels = [background]
+    if rest.size > 0.02 * _MIN_ROWS * bottom.shape[1]:
+        levels.append(_level(rest)[0])
+    near = np.zeros(bottom.shape, dtype=bool)
+    for level in levels:
+        near |= np.abs(bottom - level) <= tolerance
+    return Strip(tuple(levels), tolerance, near.mean(axis=1))
+
+
+def _level(values: npt.NDArray[np.float32]) -> tuple[float, float]:
+    """Most frequent grey value and the spread of the values near it."""
+    counts = np.bincount(np.clip((values * 255 + 0.5).astype(np.int64), 0, 255).ravel(), minlength=256)
+    smooth = np.convolve(counts, (0.5, 1.0, 0.5), mode="same")
+    mode = float(np.argmax(smooth)) / 255
+    near = values[np.abs(values - mode) <= _TOLERANCE[1]]
+    if near.size == 0:
+        return mode, _TOLERANCE[0]
+    level = float(np.median(near))
+    spread = float(np.quantile(np.abs(near - level), 0.8))
+    return level, float(np.clip(2.0 * spread, *_TOLERANCE))
+
+
+def _flat_from(flat: npt.NDArray[np.float64]) -> int:
+    """Topmost row from which everything down to the bottom is flat, apart from short gaps."""
+    start, gap = len(flat), 0
+    for row in range(len(flat) - 1, -1, -1):
+        if flat[row] >= _FLAT:
+            start, gap = row, 0
+        else:
+            gap += 1
+            if gap > _MAX_GAP:
+                break
+    return start
+
+
+def _edges(bottom: npt.NDArray[np.float32], strip: Strip, start: int) -> list[int]:
+    """Rows at which a banner may begin, from the top: a quiet row under rows that are not flat, or a line."""
+    flat = strip.flat
+    edges = []
+    for row in range(max(1, start), len(flat) - _MIN_ROWS + 1):
+        above = float(np.median(flat[max(0, row - 4) : row]))
+        quiet = float(np.median(flat[row : row + 4]))
+        jump = quiet >= _QUIET and flat[row] >= 0.5 and above <= quiet - 0.35
+        if (jump and flat[row - 1] < flat[row] - 0.2) or _is_line(bottom, strip, row):
+            edges.append(row)
+    return edges
+
+
+def _is_line(bottom: npt.NDArray[np.float32], strip: Strip, row: int) -> bool:
+    """A line over the full width: one grey value that is neither the background's nor that of the row above."""
+    values = bottom[row]
+    level = float(np.median(values))
+    if abs(level - strip.levels[0]) < 0.12 or float(np.mean(np.abs(values - level) <= 0.06)) < 0.97:
+        return False
+    return float(np.mean(np.abs(bottom[row - 1] - level) > 0.1)) > 0.6 and strip.flat[row + 1 : row + 6].max() >= _QUIET
+
+
+def _is_banner(strip_values: npt.NDArray[np.float32], strip: Strip, *, closed: bool) -> bool:
+    """Letters are there, and (where ``closed``) nothing but letters, lines and a logo lies in the strip."""
+    rows = strip_values.shape[0]
+    background = strip.levels[0]
+    contrast = float(np.abs(strip_values - background).max())
+    if contrast < 0.15 or float(np.median(strip.flat[-rows:])) < _FLAT:
+        return False
+    boxes = ink_boxes(np.abs(strip_values - background) > 0.5 * contrast)
+    if longest_line(letters(boxes, rows=rows)) >= _MIN_LETTERS:
+        return closed or not any(_foreign(b, rows) for b in boxes)
+    return False
+
+
+def _foreign(box: Box, rows: int) -> bool:
+    """A mark that is no letter and no thin line: a piece of the picture."""
+    line = box.height <= 4 or box.width <= 4
+    return not line and (box.height > 0.8 * rows or (box.top == 0 and box.width > 6))
+
+
+def _banner_without_edge(bottom: npt.NDArray[np.float32], strip: Strip, start: int) -> int:
+    """A banner under a picture whose own bottom is just as flat: it begins as far above its text as the text ends above the
+    bottom. Asked for are a full line of letters and nothing else."""
+    if start >= len(strip.flat) - _MIN_ROWS:
+        return 0
+    values = bottom[start:]
+    contrast = float(np.abs(values - strip.levels[0]).max())
+    boxes = ink_boxes(np.abs(values - strip.levels[0]) > 0.5 * contrast) if contrast >= 0.3 else []
+    text = letters(boxes, rows=values.shape[0])
+    if longest_line(text) < 2 * _MIN_LETTERS or len(text) < 0.6 * len(boxes):
+        return 0
+    margin = values.shape[0] - max(b.bottom for b in text)
+    top = max(0, min(b.top for b in text) - max(margin, 2))
+    count = values.shape[0] - top
+    whole = _is_banner(values[top:], strip, closed=False)
+    return count if whole and count <= bottom.shape[0] and top > 0 else 0

@@ -1,0 +1,119 @@
+"""Scale bar and label together: one candidate for the pixel size."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+
+from poroscan.errors import MissingExtraError
+from poroscan.intake import ocr
+from poroscan.intake.banner import stretched
+from poroscan.intake.lettering import Box
+from poroscan.intake.pixel_size import Candidate
+from poroscan.intake.scale_bar import ScaleBar, find_scale_bars, label_boxes
+from poroscan.intake.scale_label import parse_label, plausible
+
+#: Letters lower than this are not read with certainty.
+LEAST_LETTER_HEIGHT = 14
+
+_LEAST_CONFIDENCE = 0.5
+_MOST_LINES = 6
+
+
+@dataclass(frozen=True)
+class BarReading:
+    """What a scale bar says.
+
+    Parameters
+    ----------
+    bar
+        The bar, or None where none was found.
+    um
+        Length that its label states, or None where it was not read.
+    label
+        The label as read.
+    candidate
+        Pixel size from it, or None.
+    flags, notes
+        ``scale_label_unread`` where a bar was found without a length; words for people.
+    """
+
+    bar: ScaleBar | None = None
+    um: float | None = None
+    label: str = ""
+    candidate: Candidate | None = None
+    flags: tuple[str, ...] = ()
+    notes: tuple[str, ...] = ()
+
+
+def read_scale_bar(
+    grey: npt.NDArray[np.float32], *, banner_rows: int, stated_um: float | None = None, use_ocr: bool = True
+) -> BarReading:
+    """Find the scale bar, measure it, and read its label.
+
+    Parameters
+    ----------
+    grey
+        The whole picture, banner included.
+    banner_rows
+        Rows of the banner at its bottom.
+    stated_um
+        Length that the bar stands for, where the user says so; the label is not read then.
+    use_ocr
+        Whether the label is read.
+    """
+    bars = find_scale_bars(grey, banner_rows=banner_rows)
+    if not bars:
+        return BarReading()
+    if stated_um is not None:
+        return _reading(bars[0], stated_um, "as stated", doubtful=False)
+    if use_ocr and ocr.available():
+        values = stretched(grey)
+        for bar in bars:
+            found = _label_of(values, bar, banner_rows)
+            if found is not None:
+                um, text, box = found
+                return _reading(bar, um, text, doubtful=box.height < LEAST_LETTER_HEIGHT)
+    bar = bars[0]
+    if not banner_rows and bar.kind == "plain":
+        return BarReading()  # a pale straight edge of the specimen looks the same; without a label it says nothing
+    note = f"a scale bar of {bar.length:.1f} pixels was found, but its label was not read"
+    return BarReading(bar, flags=("scale_label_unread",), notes=(note,))
+
+
+def _label_of(values: npt.NDArray[np.float32], bar: ScaleBar, banner_rows: int) -> tuple[float, str, Box] | None:
+    boxes = label_boxes(values, bar, banner_rows=banner_rows)
+    if bar.gap is not None:  # what breaks the bar is its label, or it is no bar
+        boxes = [b for b in boxes if b.left >= bar.gap[0] - 2 and b.right <= bar.gap[1] + 2]
+    for box in boxes[:_MOST_LINES]:
+        try:
+            text, confidence = ocr.read_line(_crop(values, box, bar))
+        except MissingExtraError:
+            return None
+        um = parse_label(text)
+        if um is not None and confidence >= _LEAST_CONFIDENCE and plausible(um):
+            return um, text.strip(), box
+    return None
+
+
+def _crop(values: npt.NDArray[np.float32], box: Box, bar: ScaleBar) -> npt.NDArray[np.float32]:
+    """A line of letters with a margin, without the halves of a broken bar."""
+    margin = max(3, round(0.3 * box.height))
+    left, right = box.left - margin, box.right + margin
+    if bar.gap is not None and box.left >= bar.gap[0] - 2 and box.right <= bar.gap[1] + 2:
+        left, right = max(left, bar.gap[0] + 1), min(right, bar.gap[1] - 1)
+    rows, columns = values.shape
+    return values[max(0, box.top - margin) : min(rows, box.bottom + margin), max(0, left) : min(columns, right)]
+
+
+def _reading(bar: ScaleBar, um: float, text: str, *, doubtful: bool) -> BarReading:
+    size = um / bar.length
+    words = f"scale bar ({bar.length:.1f} pixels, label {text!r} = {um:g} µm)"
+    candidate = Candidate(size, "scale_bar", words, relative_uncertainty=bar.length_sd / bar.length, doubtful=doubtful)
+    notes = () if not doubtful else ("the letters of the scale bar are under 14 pixels high; check the length",)
+    if not math.isfinite(size):
+        return BarReading(bar, flags=("scale_label_unread",))
+    return BarReading(bar, um, text, candidate, notes=notes)

@@ -1,0 +1,382 @@
+"""The scale bar: found on the banner or burnt into the picture, and measured between its outer ends.
+
+A bar is a straight horizontal stroke of one grey value with background above and below. It may be plain, have ticks at its
+ends, carry a ruler of ticks, or be broken in the middle by its label. Its ends are the half-way points between its own grey
+and that of the background, interpolated between pixels.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+import numpy.typing as npt
+
+from poroscan.intake.banner import stretched
+from poroscan.intake.lettering import Box, ink_boxes, letters, text_lines
+
+#: Standard uncertainty of a bar's length in pixels: each end is drawn on a whole pixel (JCGM 100:2008, 4.3.7).
+LENGTH_SD = float(np.sqrt(2 / 12))
+
+_LEAST_LENGTH = 0.02  # of the picture's width
+_MOST_LENGTH = 0.98
+_MOST_THICKNESS = 0.25  # of the bar's length
+_SHARES = (0.5, 0.75, 0.3)  # of the strip's contrast at which strokes are cut out
+
+
+@dataclass(frozen=True)
+class ScaleBar:
+    """One stroke that may be the scale bar.
+
+    Parameters
+    ----------
+    length
+        Pixels between the outer ends.
+    box
+        Where it lies, ticks left out.
+    kind
+        ``plain``, ``ticks``, ``ruler``, ``broken`` or ``dots``.
+    gap
+        Columns of the gap that a label breaks into the bar, or None.
+    level
+        Its grey value on 0…1 of the picture's own range.
+    score
+        How much speaks for it; more is better.
+    tick
+        Width of the ticks at its ends in pixels; 0 where there are none.
+    """
+
+    length: float
+    box: Box
+    kind: str
+    level: float
+    gap: tuple[int, int] | None = None
+    score: float = 0.0
+    tick: int = 0
+
+    @property
+    def length_sd(self) -> float:
+        """Standard uncertainty of the length in pixels. Ticks leave open whether their outer sides or their middles count;
+        their width enters as the half-width of a rectangular distribution."""
+        return float(np.hypot(LENGTH_SD, self.tick / np.sqrt(3)))
+
+
+def find_scale_bars(grey: npt.NDArray[np.float32], *, banner_rows: int, most: int = 6) -> list[ScaleBar]:
+    """Strokes that may be the scale bar, the likeliest first.
+
+    Parameters
+    ----------
+    grey
+        The whole picture, banner included.
+    banner_rows
+        Rows of the banner at its bottom; bars on it are preferred to bars in the picture.
+    most
+        How many are returned at most.
+
+    Returns
+    -------
+    list of ScaleBar
+        Boxes count rows and columns of the whole picture.
+    """
+    values = stretched(grey)
+    top = values.shape[0] - banner_rows
+    found: list[ScaleBar] = []
+    if banner_rows:
+        found = [_moved(bar, top) for bar in _on_strip(values[top:])]
+    if not found:
+        found = _in_picture(values[:top])
+    return sorted(_distinct(found), key=lambda bar: -bar.score)[:most]
+
+
+def _moved(bar: ScaleBar, rows: int) -> ScaleBar:
+    return replace(bar, box=bar.box.moved(rows, 0))
+
+
+def _distinct(bars: list[ScaleBar]) -> list[ScaleBar]:
+    """Without the halves and doubles of better ones."""
+    kept: list[ScaleBar] = []
+    for bar in sorted(bars, key=lambda b: -b.score):
+        if not any(_overlap(bar.box, other.box) for other in kept):
+            kept.append(bar)
+    return kept
+
+
+def _overlap(a: Box, b: Box) -> bool:
+    rows = min(a.bottom, b.bottom) - max(a.top, b.top)
+    return rows > -3 and min(a.right, b.right) - max(a.left, b.left) > 0.5 * min(a.width, b.width)
+
+
+def _on_strip(strip: npt.NDArray[np.float32]) -> list[ScaleBar]:
+    background = float(np.median(strip))
+    bars: list[ScaleBar] = []
+    for sign in (1.0, -1.0):
+        contrast = float((sign * (strip - background)).max())
+        if contrast < 0.15:
+            continue
+        for share in _SHARES:
+            ink = sign * (strip - background) > share * contrast
+            bars += [replace(bar, score=bar.score + share) for bar in _bars(strip, ink, strip.shape)]
+        bars += _dotted(strip, sign * (strip - background) > 0.5 * contrast)
+    return bars
+
+
+def _in_picture(values: npt.NDArray[np.float32]) -> list[ScaleBar]:
+    bars: list[ScaleBar] = []
+    for ink in (values >= 0.9, values <= 0.08, values >= 0.75):
+        bars += _bars(values, ink, values.shape)
+    return [bar for bar in bars if bar.kind != "plain" or bar.box.height >= 2]
+
+
+def _bars(values: npt.NDArray[np.float32], ink: npt.NDArray[np.bool_], shape: tuple[int, ...]) -> list[ScaleBar]:
+    strokes = [s for s in _strokes(ink) if _free(ink, s)]
+    whole = [s for s in strokes if s.width >= max(15, _LEAST_LENGTH * shape[1]) and not _is_rule(ink, s)]
+    whole = [s for s in whole if not _in_frame(ink, s, strokes)]
+    bars = [_measured(values, ink, s) for s in whole]
+    for left, right in _halves(strokes, ink):
+        bars.append(_broken(values, ink, left, right))
+    return [b for b in bars if b.length <= _MOST_LENGTH * shape[1] and b.level >= 0]
+
+
+def _strokes(ink: npt.NDArray[np.bool_]) -> list[Box]:
+    """Rectangles of ink: runs of one row after the other with the same ends to two pixels."""
+    least = max(8, int(0.008 * ink.shape[1]))
+    padded = np.zeros((ink.shape[0], ink.shape[1] + 2), np.int8)
+    padded[:, 1:-1] = ink
+    steps = np.diff(padded, axis=1)
+    rows, starts = np.nonzero(steps == 1)
+    ends = np.nonzero(steps == -1)[1]
+    long = ends - starts >= least
+    open_: list[list[int]] = []
+    done: list[list[int]] = []
+    for row, start, end in zip(rows[long].tolist(), starts[long].tolist(), ends[long].tolist(), strict=True):
+        still: list[list[int]] = []
+        for stroke in open_:
+            (still if stroke[1] >= row - 1 else done).append(stroke)
+        open_ = still
+        for stroke in open_:
+            if stroke[1] == row - 1 and abs(stroke[2] - start) <= 2 and abs(stroke[3] - end) <= 2:
+                stroke[1] = row
+                break
+        else:
+            open_.append([row, row, start, end])
+    boxes = [Box(t, b + 1, s, e) for t, b, s, e in done + open_]
+    return [b for b in boxes if b.height <= max(2, _MOST_THICKNESS * b.width)]
+
+
+def _free(ink: npt.NDArray[np.bool_], s: Box) -> bool:
+    """Background above and below, apart from ticks; not touching the picture's sides."""
+    if s.left == 0 or s.right == ink.shape[1]:
+        return False
+    inner = slice(s.left + 1, s.right - 1)
+    for row in (s.top - 2, s.bottom + 1):
+        if 0 <= row < ink.shape[0] and float(ink[row, inner].mean()) > 0.35:
+            return False
+    return True
+
+
+def _reach(ink: npt.NDArray[np.bool_], s: Box, column: int) -> int:
+    """Rows of the unbroken ink through the stroke near a column (the height of a tick)."""
+    best = 0
+    for c in range(max(0, column - 2), min(ink.shape[1], column + 3)):
+        up, down = s.top, s.bottom
+        while up > 0 and ink[up - 1, c]:
+            up -= 1
+        while down < ink.shape[0] and ink[down, c]:
+            down += 1
+        best = max(best, down - up)
+    return best
+
+
+def _is_rule(ink: npt.NDArray[np.bool_], s: Box) -> bool:
+    """A line between the cells of a table: an end stands on a line that runs through the strip."""
+    most = 0.85 * ink.shape[0]
+    return ink.shape[0] > 8 and (_reach(ink, s, s.left) >= most or _reach(ink, s, s.right - 1) >= most)
+
+
+def _in_frame(ink: npt.NDArray[np.bool_], s: Box, strokes: list[Box]) -> bool:
+    """A side of a rectangle: another stroke with the same ends, joined to this one at both."""
+    for other in strokes:
+        if other is s or abs(other.left - s.left) > 2 or abs(other.right - s.right) > 2:
+            continue
+        height = max(other.bottom, s.bottom) - min(other.top, s.top)
+        if _reach(ink, s, s.left) >= height - 2 and _reach(ink, s, s.right - 1) >= height - 2:
+            return True
+    return False
+
+
+def _halves(strokes: list[Box], ink: npt.NDArray[np.bool_]) -> list[tuple[Box, Box]]:
+    """Pairs of strokes on one line with letters between them."""
+    pairs = []
+    for i, a in enumerate(strokes):
+        for b in strokes[i + 1 :]:
+            left, right = (a, b) if a.left < b.left else (b, a)
+            gap = right.left - left.right
+            if abs(a.top - b.top) > 1 or abs(a.bottom - b.bottom) > 1 or not 6 <= gap <= 3 * (a.width + b.width):
+                continue
+            if not 0.4 <= a.width / b.width <= 2.5 or a.width < 10 or b.width < 10:
+                continue
+            if _letters_between(ink, left, right):
+                pairs.append((left, right))
+    return pairs
+
+
+def _letters_between(ink: npt.NDArray[np.bool_], left: Box, right: Box) -> bool:
+    """Ink in the gap that is lower than each half is long, and no other line in the gap's place."""
+    between = np.asarray(ink[max(0, left.top - 60) : left.bottom + 60, left.right + 1 : right.left - 1])
+    middle = left.top - max(0, left.top - 60)
+    filled = np.asarray(between.any(axis=1))
+    if not between.size or not filled[max(0, middle - 6) : middle + 6].any():
+        return False
+    top = bottom = middle
+    while top > 0 and filled[max(0, top - 3) : top].any():  # the dots of an i leave gaps of two rows
+        top -= 1
+    while bottom < len(filled) and filled[bottom : bottom + 3].any():
+        bottom += 1
+    height = bottom - top
+    return 5 <= height <= 1.3 * min(left.width, right.width) and 0.03 <= float(between[top:bottom].mean()) <= 0.75
+
+
+def _measured(values: npt.NDArray[np.float32], ink: npt.NDArray[np.bool_], s: Box) -> ScaleBar:
+    level, length = _length(values, s.top, s.bottom, s.left, s.right)
+    kind = _kind(ink, s)
+    tick = _tick_width(ink, s) if kind != "plain" else 0
+    score = {"plain": 1.0, "ticks": 2.5, "ruler": 2.5}[kind] + _shape_score(s, ink.shape[1])
+    return ScaleBar(length, s, kind, level, score=score, tick=tick)
+
+
+def _broken(values: npt.NDArray[np.float32], ink: npt.NDArray[np.bool_], left: Box, right: Box) -> ScaleBar:
+    box = Box(min(left.top, right.top), max(left.bottom, right.bottom), left.left, right.right)
+    level, length = _length(values, box.top, box.bottom, box.left, box.right)
+    balanced = 1.0 - abs(left.width - right.width) / (left.width + right.width)
+    score = 2.5 + balanced + _shape_score(box, ink.shape[1])
+    return ScaleBar(length, box, "broken", level, gap=(left.right, right.left), score=score, tick=_tick_width(ink, box))
+
+
+def _shape_score(s: Box, columns: int) -> float:
+    share = s.width / columns
+    return min(share, 0.3) + (0.5 if 0.05 <= share <= 0.6 else 0.0) + (0.3 if s.height <= 0.1 * s.width else 0.0)
+
+
+def _kind(ink: npt.NDArray[np.bool_], s: Box) -> str:
+    """Whether ticks stand at the ends, or along the stroke as on a ruler."""
+    ends = [_reach(ink, s, c) for c in (s.left, s.right - 1)]
+    least = max(s.height + 3, 1.5 * s.height)
+    if min(ends) < least or max(ends) > 2.0 * min(ends):
+        return "plain"
+    for row in (s.top - 3, s.bottom + 2):
+        if 0 <= row < ink.shape[0]:
+            ticks = int(np.count_nonzero(np.diff(ink[row, s.left : s.right].astype(np.int8)) == 1))
+            if ticks >= 3:
+                return "ruler"
+    return "ticks"
+
+
+def _tick_width(ink: npt.NDArray[np.bool_], s: Box) -> int:
+    """Columns of the left tick just above or below the stroke; 0 where none stands there."""
+    widths = []
+    for row in (s.top - 2, s.bottom + 1):
+        if 0 <= row < ink.shape[0]:
+            near = ink[row, s.left : s.left + 12]
+            widths.append(int(np.argmin(near)) if near[:2].any() and not near.all() else 0)
+    return max(widths, default=0)
+
+
+def _length(values: npt.NDArray[np.float32], top: int, bottom: int, left: int, right: int) -> tuple[float, float]:
+    """Grey value of a stroke and the distance of its half-way ends; the level is −1 where an end cannot be placed."""
+    profile = values[top:bottom].mean(axis=0)
+    ends = []
+    inside = min(6, max(1, (right - left) // 3))
+    for edge, step in ((left, -1), (right - 1, 1)):
+        inner = float(np.median(profile[edge - step * np.arange(inside)]))
+        outer_columns = edge + step * np.arange(2, 5)
+        outer_columns = outer_columns[(outer_columns >= 0) & (outer_columns < len(profile))]
+        if outer_columns.size == 0:
+            return -1.0, 0.0
+        outer = float(np.median(profile[outer_columns]))
+        ends.append(_crossing(profile, edge, step, 0.5 * (inner + outer)))
+    level = float(np.median(profile[left : left + inside]))
+    return level, abs(ends[1] - ends[0])
+
+
+def _crossing(profile: npt.NDArray[np.float32], edge: int, step: int, half: float) -> float:
+    """Where the profile passes ``half``, in columns counted from the left side of pixel 0; looked for three pixels around."""
+    sign = 1.0 if profile[edge] >= half else -1.0
+    for column in range(edge - 2 * step, edge + 4 * step, step):
+        if not (0 <= column < len(profile) and 0 <= column + step < len(profile)):
+            break
+        a, b = sign * (float(profile[column]) - half), sign * (float(profile[column + step]) - half)
+        if a >= 0 > b:
+            return column + 0.5 + step * a / (a - b)
+    return edge + 0.5 + 0.5 * step
+
+
+def _dotted(strip: npt.NDArray[np.float32], ink: npt.NDArray[np.bool_]) -> list[ScaleBar]:
+    """Rows of at least six equal dots or ticks at equal distances; such a ruler counts from the first to the last one."""
+    boxes = [b for b in ink_boxes(ink) if b.width <= 8 and b.height <= 0.5 * ink.shape[0]]
+    by_middle: dict[int, list[Box]] = {}
+    for b in boxes:
+        by_middle.setdefault(b.bottom, []).append(b)
+    bars = []
+    for row in by_middle.values():
+        if len(row) < 6:
+            continue
+        centres = np.array([(b.left + b.right) / 2 for b in row])
+        spacing = np.diff(centres)
+        if spacing.min() >= 4 and np.ptp(spacing) <= 2.01:
+            box = Box(min(b.top for b in row), row[0].bottom, row[0].left, row[-1].right)
+            bars.append(ScaleBar(float(centres[-1] - centres[0]), box, "dots", float(strip[ink].max()), score=2.5))
+    return bars
+
+
+def label_boxes(grey: npt.NDArray[np.float32], bar: ScaleBar, *, banner_rows: int) -> list[Box]:
+    """Lines of letters around a bar, the nearest first.
+
+    Parameters
+    ----------
+    grey
+        The whole picture, banner included.
+    bar
+        From ``find_scale_bars``.
+    banner_rows
+        Rows of the banner at its bottom.
+    """
+    values = stretched(grey)
+    rows, columns = values.shape
+    on_banner = banner_rows and bar.box.top >= rows - banner_rows
+    reach = max(40, min(160, int(0.1 * rows)))
+    first, last = (rows - banner_rows, rows) if on_banner else (0, rows - banner_rows)
+    top, bottom = max(first, bar.box.top - reach), min(last, bar.box.bottom + reach)
+    left, right = max(0, bar.box.left - reach - 40), min(columns, bar.box.right + 3 * reach)
+    window = values[top:bottom, left:right]
+    lines = _lines(window, bar, Box(top, bottom, left, right))
+    moved = [line.moved(top, left) for line in lines]
+    return sorted((line for line in moved if line.width >= line.height), key=lambda line: _distance(line, bar))
+
+
+def _lines(window: npt.NDArray[np.float32], bar: ScaleBar, frame: Box) -> list[Box]:
+    """Lines of letters in a window, as bright as the bar first, then of the opposite brightness."""
+    ink = np.abs(window - bar.level) <= 0.35
+    if float(ink.mean()) > 0.5:
+        ink = np.abs(window - bar.level) <= 0.2
+    boxes = letters(ink_boxes(ink), rows=window.shape[0] + 40)
+    stroke = bar.box.moved(-frame.top, -frame.left)
+    boxes = [b for b in boxes if not _is_part(b, stroke, bar.gap is not None)]
+    return text_lines(boxes)
+
+
+def _is_part(box: Box, stroke: Box, broken: bool) -> bool:
+    """A piece of the bar itself: its halves, its ticks."""
+    meets = box.top < stroke.bottom + 1 and box.bottom > stroke.top - 1
+    if not meets or box.right < stroke.left - 1 or box.left > stroke.right + 1:
+        return False
+    return not broken or box.left <= stroke.left + 2 or box.right >= stroke.right - 2 or box.width > 3 * box.height
+
+
+def _distance(line: Box, bar: ScaleBar) -> float:
+    """How far a line of letters lies from a bar; 0 in the gap of a broken one."""
+    if bar.gap is not None and line.left >= bar.gap[0] - 2 and line.right <= bar.gap[1] + 2:
+        return 0.0
+    down = max(bar.box.top - line.bottom, line.top - bar.box.bottom, 0)
+    aside = max(bar.box.left - line.right, line.left - bar.box.right, 0)
+    middle = abs((line.left + line.right) / 2 - (bar.box.left + bar.box.right) / 2) / max(bar.box.width, 1)
+    return 1.0 + down + 1.5 * aside + 3.0 * middle
