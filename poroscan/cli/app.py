@@ -38,6 +38,7 @@ app = typer.Typer(
 #: and may return an exit code.
 COMMANDS: tuple[str, ...] = (
     "scan",
+    "inspect",
     "report",
 )
 

@@ -10,6 +10,7 @@ sidecar         the table beside the pictures
 headers         pixel sizes written in headers; pixel_size: which source counts
 banner          the data banner; scale_bar, ocr: the scale bar and its label
 image_quality   clipping, noise, resolution, illumination, charging
+inspection      a folder looked over; contact_sheet: the same as a picture
 fields          simulated fields; vtk: one of their formats
 """
 
