@@ -15,7 +15,7 @@ import pyarrow.parquet as pq
 
 from poroscan.batch.image import ImageOutcome
 from poroscan.batch.store import RunFolder
-from poroscan.batch.summary import BatchCollector, batch_columns
+from poroscan.batch.summary import BatchCollector, batch_columns, batch_schema
 from poroscan.batch.tables import (
     CURVE_SCHEMA,
     ParquetStream,
@@ -29,7 +29,7 @@ from poroscan.errors import StoreError
 
 
 def collate(run: RunFolder, outcomes: Sequence[ImageOutcome]) -> None:
-    """Write particles.csv and .parquet, pores.parquet, curves.parquet and batches.csv.
+    """Write particles and batches as .csv and .parquet, pores.parquet and curves.parquet.
 
     Parameters
     ----------
@@ -55,8 +55,8 @@ def _particles_and_batches(run: RunFolder, outcomes: Iterable[ImageOutcome]) -> 
     with contextlib.ExitStack() as stack:
         particles_csv = _open_csv(stack, run, "particles.csv", particle_columns())
         batches_csv = _open_csv(stack, run, "batches.csv", batch_columns())
-        path = stack.enter_context(run.replacing("particles.parquet"))
-        stream = stack.enter_context(contextlib.closing(ParquetStream(path, particle_schema())))
+        particles = _open_parquet(stack, run, "particles.parquet", particle_schema())
+        batches = _open_parquet(stack, run, "batches.parquet", batch_schema())
         for batch, members in itertools.groupby(outcomes, key=lambda o: o.batch):
             collector = BatchCollector(batch)
             for outcome in members:
@@ -64,8 +64,15 @@ def _particles_and_batches(run: RunFolder, outcomes: Iterable[ImageOutcome]) -> 
                 collector.add_image(rows, measured=outcome.outcome == "measured")
                 particles_csv.writerows(map(csv_row, rows))
                 if rows:
-                    stream.add(pa.Table.from_pylist(rows, schema=particle_schema()))
-            batches_csv.writerow(csv_row(collector.row()))
+                    particles.add(pa.Table.from_pylist(rows, schema=particle_schema()))
+            summary = collector.row()
+            batches_csv.writerow(csv_row(summary))
+            batches.add(pa.Table.from_pylist([summary], schema=batch_schema()))
+
+
+def _open_parquet(stack: contextlib.ExitStack, run: RunFolder, name: str, schema: pa.Schema) -> ParquetStream:
+    path = stack.enter_context(run.replacing(name))
+    return stack.enter_context(contextlib.closing(ParquetStream(path, schema)))
 
 
 def _open_csv(stack: contextlib.ExitStack, run: RunFolder, name: str, columns: Sequence[str]) -> Any:

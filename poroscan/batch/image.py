@@ -10,6 +10,7 @@ import hashlib
 import io
 import json
 import math
+import os
 import traceback
 from collections.abc import Mapping
 from dataclasses import dataclass, field
@@ -17,6 +18,7 @@ from pathlib import Path
 from typing import Any, Literal
 
 import numpy as np
+import numpy.typing as npt
 import pyarrow as pa
 import tifffile
 
@@ -28,6 +30,8 @@ from poroscan.errors import InputError, MissingExtraError, StoreError
 from poroscan.intake.files import shown
 from poroscan.intake.folders import companions
 from poroscan.intake.loading import load_picture
+from poroscan.intake.pictures import read_stored
+from poroscan.intake.settings import IntakeSettings
 from poroscan.intake.sidecar import SidecarRow
 from poroscan.measure import Measurement, measure_section
 from poroscan.quantities import FLAGS
@@ -37,6 +41,9 @@ from poroscan.segment.picture import segment_picture
 from poroscan.segment.result import Segmentation
 
 Outcome = Literal["measured", "no_particle", "unreadable", "failed", "lost"]
+
+#: Longer side of the small picture of a whole image.
+OVERVIEW_PX = 520
 
 #: Outcome -> what to do, where the reason itself does not say.
 REMEDIES: Mapping[str, str] = {
@@ -228,7 +235,7 @@ def image_seed(seed: int, sha256: str | None) -> int:
 def _measured_files(task: ImageTask, sha256: str | None) -> dict[str, bytes]:
     recipe = task.recipe
     picture = load_picture(task.path, recipe.intake, sidecar=task.sidecar)
-    segmentation = segment_picture(picture, recipe.segment, **_given(task))
+    segmentation = segment_picture(picture, recipe.segment, **_given(task, picture))
     seed = image_seed(recipe.seed, sha256)
     measurements = tuple(
         measure_section(section, recipe.measure, rng=np.random.default_rng([seed, number]))
@@ -238,18 +245,28 @@ def _measured_files(task: ImageTask, sha256: str | None) -> dict[str, bytes]:
     return {**_tables(task, found), **_pictures(task, found), "image.json": _json_bytes(_entry(task, found, sha256))}
 
 
-def _given(task: ImageTask) -> dict[str, Any]:
-    """Masks and strokes that lie beside the picture, as arrays."""
-    beside = companions(task.path)
-    given: dict[str, Any] = {}
-    for name, path in (
-        ("given_pores", beside.pores),
-        ("given_particles", beside.particles),
-        ("strokes", beside.strokes),
-    ):
-        if path is not None:
-            given[name] = path
+def _given(task: ImageTask, picture: Picture) -> dict[str, Any]:
+    """Masks and strokes that lie beside the picture, as arrays of its shape."""
+    beside, given = companions(task.path), {}
+    if beside.pores:
+        given["given_pores"] = _beside(task, beside.pores, picture) > 0
+    if beside.particles:
+        given["given_particles"] = _beside(task, beside.particles, picture).astype(np.int32)
+    if beside.strokes and task.recipe.segment.pores == "trained":
+        given["strokes"] = _beside(task, beside.strokes, picture).astype(np.int32)
     return given
+
+
+def _beside(task: ImageTask, path: Path, picture: Picture) -> npt.NDArray[Any]:
+    """Samples of a mask; drawn on the whole picture or on the picture without its banner."""
+    values = read_stored(path, IntakeSettings(max_pixels=task.recipe.intake.max_pixels)).values
+    rows, columns = picture.grey.shape
+    if values.shape not in ((rows, columns), (rows + picture.banner_rows, columns)):
+        raise InputError(
+            f"{shown(path)}: is {values.shape[1]} × {values.shape[0]} pixels, its picture {columns} × {rows}; "
+            "draw the mask on the picture itself"
+        )
+    return values[:rows]
 
 
 def _keys(task: ImageTask, section: Section) -> tuple[str, str, str]:
@@ -274,7 +291,7 @@ def _pictures(task: ImageTask, found: _Measured) -> dict[str, bytes]:
     files = {
         "overlay.png": indexed_png(draw(grey, labels, pores, numbers=True)),
         "labels.ome.tif": label_tiff(found.segmentation, found.picture),
-        "small.webp": thumbnail(grey, labels, pores, longest=720, quality=look.picture_quality, numbers=True),
+        "small.webp": thumbnail(grey, labels, pores, longest=OVERVIEW_PX, quality=look.picture_quality, numbers=True),
     }
     for number, section in enumerate(found.segmentation.sections, start=1):
         window = tuple(slice(o, o + n) for o, n in zip(section.origin, section.particle.shape, strict=True))
@@ -427,6 +444,7 @@ def _without_path(task: ImageTask, message: str) -> tuple[str, str]:
     """Reason and remedy of an input error, without the path, which differs from machine to machine."""
     for prefix in (shown(task.path), str(task.path)):
         message = message.removeprefix(f"{prefix}: ").replace(prefix, task.image)
+    message = message.replace(f"{shown(task.path.parent)}{os.sep}", "")
     reason, _, remedy = message.partition("; ")
     return _one_line(reason), _one_line(remedy) or "export the picture again or leave it out"
 

@@ -10,7 +10,7 @@ from __future__ import annotations
 import json
 from collections import Counter
 from collections.abc import Callable, Iterator, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
@@ -24,6 +24,7 @@ from poroscan.batch.workers import run_tasks
 from poroscan.errors import InputError, SettingsError, StoreError
 from poroscan.intake.files import shown
 from poroscan.intake.folders import FolderListing, InputFile, Problem, list_inputs
+from poroscan.intake.sidecar import SidecarRow
 
 #: Called after every picture with its outcome, the number done, and the number of all.
 Progress = Callable[[ImageOutcome, int, int], None]
@@ -164,9 +165,14 @@ def _tasks(folder: Path, listing: FolderListing, run: RunFolder, recipe: Recipe,
             folder_name(batch, item.image),
             run.path,
             recipe,
-            listing.sidecar_of(item),
+            _portable(listing.sidecar_of(item)),
             fresh,
         )
+
+
+def _portable(row: SidecarRow | None) -> SidecarRow | None:
+    """The same row with a plain dict, which can be sent to another process."""
+    return None if row is None else replace(row, other=dict(row.other))
 
 
 def _batch_name(folder: Path, item: InputFile, recipe: Recipe) -> str:

@@ -14,6 +14,7 @@ from typing import Any
 
 import numpy as np
 import numpy.typing as npt
+import pyarrow as pa
 
 from poroscan.quantities import CATALOGUE, Quantity
 
@@ -56,6 +57,14 @@ def batch_columns() -> tuple[str, ...]:
         columns += [q.key, f"{q.key}_low", f"{q.key}_high", f"{q.key}_sd", f"{q.key}_n"]
         columns += [q.pixel_key] if q.pixel_key else []
     return (*columns, *VERDICT_COLUMNS)
+
+
+def batch_schema() -> pa.Schema:
+    """Arrow schema of batches.parquet; undefined numbers are null."""
+    text = {"batch", "regime", "regime_set", "verdict", "flags"}
+    counts = set(COUNT_COLUMNS[1:]) | {f"{q.key}_n" for q in AVERAGED}
+    kinds = {True: pa.string(), False: pa.float64()}
+    return pa.schema([(c, pa.int64() if c in counts else kinds[c in text]) for c in batch_columns()])
 
 
 class BatchCollector:
@@ -112,7 +121,7 @@ class BatchCollector:
             row.update(_cells(q, means, one_scale=len(self._scales) <= 1))
         flags = ["no_pixel_size"] if None in self._scales else []
         row |= dict.fromkeys(VERDICT_COLUMNS) | {"flags": " ".join([*flags, "no_atlas"])}
-        return {column: row[column] for column in batch_columns()}
+        return {column: _defined(row[column]) for column in batch_columns()}
 
 
 def is_used(row: Mapping[str, Any]) -> bool:
@@ -161,6 +170,10 @@ def _cells(q: Quantity, means: Mapping[str, BatchMean], *, one_scale: bool) -> I
     yield f"{q.key}_n", result.number
     if q.pixel_key:  # pixels of different size are not averaged
         yield q.pixel_key, means[q.pixel_key].mean if one_scale else math.nan
+
+
+def _defined(value: Any) -> Any:
+    return None if isinstance(value, float) and math.isnan(value) else value
 
 
 def _number(value: Any) -> float:

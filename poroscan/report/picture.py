@@ -125,7 +125,7 @@ def thumbnail(
         pores = resize(pores.astype(np.float32), shape, order=1, anti_aliasing=True, preserve_range=True) > 0.5
         labels = labels[_nearest(labels.shape[0], shape[0])][:, _nearest(labels.shape[1], shape[1])]
     rgb = palette()[draw(grey, labels, pores, numbers=numbers)]
-    return bytes(imagecodecs.webp_encode(rgb, level=quality))
+    return bytes(imagecodecs.webp_encode(rgb, level=quality, lossless=False, method=5))
 
 
 def _nearest(old: int, new: int) -> npt.NDArray[np.intp]:

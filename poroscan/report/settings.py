@@ -29,8 +29,8 @@ class ReportSettings:
 
     title: str = "Pore structure of particle cross-sections"
     largest_number_of_particles: int = 400
-    picture_width_px: int = 340
-    picture_quality: int = 62
+    picture_width_px: int = 280
+    picture_quality: int = 40
 
     __pydantic_config__: ClassVar[dict[str, str]] = {"extra": "forbid"}
 

@@ -1,0 +1,224 @@
+"""Sentences for people: what a batch looks like, what a flag means, what was left out.
+
+Fractions are per cent here and nowhere else. A sentence says more than its interval allows in no case: a difference is named
+only where the interval excludes none.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping
+from typing import Any
+
+from poroscan.quantities import FLAGS, Quantity, by_key
+from poroscan.report.numbers import UNDEFINED, decimals_of, fixed, interval, plain
+
+Row = Mapping[str, Any]
+
+#: What the report says of the limits of its own statements.
+CAUTIONS: tuple[str, ...] = (
+    "A section is a sample of one plane. Porosity, size and regime carry the sampling error that is shown; what the "
+    "interval does not name, it does not cover.",
+    "A regime is an inference from simulations with stated assumptions, not a measurement.",
+    "Outlines and pores were found by a program. Look at the pictures: numbers from a wrong outline are wrong however "
+    "narrow their interval.",
+    "Particles for medicine, food, or pressure and safety duty are released by validated methods, local rules and "
+    "licensed people. This report is not such a release.",
+)
+
+OUTCOMES: Mapping[str, str] = {
+    "measured": "measured",
+    "no_particle": "no particle found",
+    "unreadable": "not read",
+    "failed": "failed",
+    "lost": "lost",
+}
+
+
+def count(number: float, one: str, many: str | None = None) -> str:
+    """A number with its noun.
+
+    Parameters
+    ----------
+    number
+        How many.
+    one, many
+        The noun; the plural is made with an s where it is not given.
+
+    Examples
+    --------
+    >>> count(1, "picture"), count(3, "batch", "batches")
+    ('1 picture', '3 batches')
+    """
+    return f"{int(number)} {one if number == 1 else many or one + 's'}"
+
+
+def cell(row: Row, key: str) -> str:
+    """A quantity of a row with its interval, in micrometres where known and else in pixels.
+
+    Parameters
+    ----------
+    row
+        Row of particles or batches.
+    key
+        Micrometre key.
+    """
+    q = by_key(key)
+    if row.get(q.key) is None and q.pixel_key and _finite(row.get(q.pixel_key)):
+        return f"{plain(row[q.pixel_key])} {pixel_unit(q)}"
+    return interval(row.get(q.key), row.get(f"{q.key}_low"), row.get(f"{q.key}_high"))
+
+
+def parted(text: str) -> tuple[str, str]:
+    """A value and the words of its interval, without brackets, so that they can be set apart.
+
+    Parameters
+    ----------
+    text
+        As ``cell`` gives it.
+
+    Examples
+    --------
+    >>> parted("0.43 (0.41 to 0.45)")
+    ('0.43', '0.41 to 0.45')
+    """
+    value, _, ends = text.partition(" (")
+    return value, ends.removesuffix(")")
+
+
+def with_unit(row: Row, key: str) -> str:
+    """As ``cell``, with the unit behind the value.
+
+    Parameters
+    ----------
+    row, key
+        As in ``cell``.
+    """
+    q, text = by_key(key), cell(row, key)
+    if text == UNDEFINED or not _finite(row.get(q.key)) or not q.unit_words:
+        return text
+    value, _, rest = text.partition(" ")
+    return f"{value}\u00a0{q.unit_words}" + (f" {rest}" if rest else "")
+
+
+def pixel_unit(q: Quantity) -> str:
+    """Unit of the pixel twin in words.
+
+    Parameters
+    ----------
+    q
+        Catalogue entry.
+    """
+    return q.unit_words.replace("µm", "px")
+
+
+def per_cent(row: Row, key: str) -> str:
+    """A fraction with its interval, in per cent.
+
+    Parameters
+    ----------
+    row, key
+        As in ``cell``.
+    """
+    value, low, high = (_hundredfold(row.get(k)) for k in (key, f"{key}_low", f"{key}_high"))
+    if value is None:
+        return UNDEFINED
+    decimals = decimals_of(value, low, high)
+    if low is None or high is None:
+        return f"{fixed(value, decimals)}\u00a0%"
+    return f"{fixed(value, decimals)}\u00a0% (95 % interval {fixed(low, decimals)} to {fixed(high, decimals)}\u00a0%)"
+
+
+def batch_counts(row: Row) -> str:
+    """How much was looked at, in one sentence.
+
+    Parameters
+    ----------
+    row
+        Row of batches.csv.
+    """
+    text = f"{count(row['particles'], 'particle')} in {count(row['images'], 'picture')}"
+    if row["particles_cut_by_frame"]:
+        cut = count(row["particles_cut_by_frame"], "particle")
+        verb = "is" if row["particles_cut_by_frame"] == 1 else "are"
+        text += f"; {cut} {verb} cut by the frame and left out of the means"
+    return text + "."
+
+
+def batch_sentences(row: Row) -> list[str]:
+    """What the batch looks like, in plain words with numbers and intervals.
+
+    Parameters
+    ----------
+    row
+        Row of batches.csv.
+    """
+    if not row["particles_used"]:
+        return ["No particle of this batch counts towards a mean; the particles below stand for themselves."]
+    sentences = [
+        _sentence("Pores take up {} of the section.", per_cent(row, "porosity")),
+        _sentence("Half of the pore area lies in pores wider than {}.", with_unit(row, "pore_d50_um")),
+        _sentence("The walls between them have a median thickness of {}.", with_unit(row, "wall_d50_um")),
+        _sentence("The skin is {} thick.", with_unit(row, "skin_thickness_um")),
+        _asymmetry(row),
+        _sentence("Sections have an equivalent diameter of {}.", with_unit(row, "equivalent_diameter_um")),
+    ]
+    if row["particles_used"] == 1:
+        sentences.append("With one particle there is no interval for the batch: nothing says how far others differ.")
+    return [s for s in sentences if s]
+
+
+def regime_sentence(row: Row) -> str:
+    """Which regime made the batch, as far as it is known.
+
+    Parameters
+    ----------
+    row
+        Row of batches.csv.
+    """
+    if not row.get("regime"):
+        return "Demixing regime: none given, because no atlas of simulated particles was available."
+    probability = row.get("regime_probability")
+    sure = f" (probability {plain(probability, digits=2)})" if _finite(probability) else ""
+    return f"Demixing regime: {row['regime']}{sure}; not ruled out: {row.get('regime_set') or row['regime']}."
+
+
+def flag_words(flags: str, *, leave_out: tuple[str, ...] = ("no_atlas",)) -> list[tuple[str, str]]:
+    """Words and remedies of flags.
+
+    Parameters
+    ----------
+    flags
+        Keys, separated by spaces.
+    leave_out
+        Keys that are said elsewhere.
+    """
+    return [(FLAGS[f].words, FLAGS[f].remedy) for f in (flags or "").split() if f in FLAGS and f not in leave_out]
+
+
+def _asymmetry(row: Row) -> str:
+    value, low, high = (_number(row.get(f"radial_asymmetry{end}")) for end in ("", "_low", "_high"))
+    if math.isnan(value + low + high):
+        return ""
+    text = f"radial asymmetry {interval(value, low, high)}"
+    if low > 0:
+        return f"The outer half of the section is more porous than the inner half ({text})."
+    if high < 0:
+        return f"The outer half of the section is less porous than the inner half ({text})."
+    return f"No difference between outer and inner half shows ({text})."
+
+
+def _sentence(pattern: str, text: str) -> str:
+    return "" if text == UNDEFINED else pattern.format(text)
+
+
+def _hundredfold(value: Any) -> float | None:
+    return 100.0 * value if _finite(value) else None
+
+
+def _number(value: Any) -> float:
+    return float(value) if _finite(value) else math.nan
+
+
+def _finite(value: Any) -> bool:
+    return isinstance(value, int | float) and math.isfinite(value)
