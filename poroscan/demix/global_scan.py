@@ -64,7 +64,7 @@ def tabulate(mixture: Mixture) -> EnergyTable:
     """Free energy of a mixture over the triangle."""
     tail = np.geomspace(1e-7, 5e-3, 14)
     inner = np.linspace(0, 1, _SHARES)[1:-1]
-    share: FloatArray = np.concatenate([[0.0], tail, inner, 1 - tail[::-1], [1.0]])
+    share = np.concatenate([[0.0], tail, inner, 1 - tail[::-1], [1.0]])
     dilute = np.concatenate([np.geomspace(1e-9, 1e-4, 8), np.geomspace(2e-4, 0.02, 24)])
     polymer = np.concatenate([[0.0], dilute, np.linspace(0.02, 0.99, 140)[1:], 1 - np.geomspace(5e-3, 1e-5, 5)])
     phi = composition(share[:, None], polymer[None, :])
@@ -72,9 +72,9 @@ def tabulate(mixture: Mixture) -> EnergyTable:
     keep[::_HULL_STRIDE, ::_HULL_STRIDE] = True
     keep[-1, ::_HULL_STRIDE] = True
     phi = np.concatenate([phi.reshape(3, -1), [[0.0], [0.0], [1.0]]], axis=1)
-    keep = np.append(keep.ravel(), True)
+    kept = np.nonzero(np.append(keep.ravel(), True))[0]
     energy = ideal_energy(mixture, phi) + excess(mixture, phi)[0]
-    return EnergyTable(phi, energy, np.nonzero(keep)[0])
+    return EnergyTable(phi, energy, kept)
 
 
 def hull_chords(mixture: Mixture, table: EnergyTable) -> FloatArray:
