@@ -80,7 +80,35 @@ def potentials(p, n, par, off_rows, off_weights, e_p, e_n, slow, w_pn, w_ps, w_n
 
 
 @njit(**_FAST)
-def _link(p0, p1, n0, n1, ep0, ep1, en0, en1, a0, a1, x0, x1, y0, y1, z0, z1, r_x, r_y, r_z, i_p, i_s, i_n, m_p, one, weight, f_p, f_n):  # type: ignore[no-untyped-def]
+def _link(
+    p0,
+    p1,
+    n0,
+    n1,
+    ep0,
+    ep1,
+    en0,
+    en1,
+    a0,
+    a1,
+    x0,
+    x1,
+    y0,
+    y1,
+    z0,
+    z1,
+    r_x,
+    r_y,
+    r_z,
+    i_p,
+    i_s,
+    i_n,
+    m_p,
+    one,
+    weight,
+    f_p,
+    f_n,
+):  # type: ignore[no-untyped-def]
     for j in range(f_p.size):
         s0, s1 = one - p0[j] - n0[j], one - p1[j] - n1[j]
         dp, dn, ds = (p1[j] - p0[j]) * i_p, (n1[j] - n0[j]) * i_n, (s1 - s0) * i_s
@@ -136,10 +164,33 @@ def rates(p, n, e_p, e_n, slow, w_pn, w_ps, w_ns, par, links, shifts, weights, n
                     buf[4, j] = zero
             lo, hi = 1 + s, columns + 1 + s
             _link(
-                p[r, 1:-1], p[q, lo:hi], n[r, 1:-1], n[q, lo:hi], e_p[r, 1:-1], e_p[q, lo:hi], e_n[r, 1:-1], e_n[q, lo:hi],
-                slow[r, 1:-1], slow[q, lo:hi], w_pn[r, 1:-1], w_pn[q, lo:hi], w_ps[r, 1:-1], w_ps[q, lo:hi],
-                w_ns[r, 1:-1], w_ns[q, lo:hi], buf[2, 1:-1], buf[3, 1:-1], buf[4, 1:-1], i_p, i_s, i_n, m_p, one, weight,
-                buf[0, 1:-1], buf[1, 1:-1],
+                p[r, 1:-1],
+                p[q, lo:hi],
+                n[r, 1:-1],
+                n[q, lo:hi],
+                e_p[r, 1:-1],
+                e_p[q, lo:hi],
+                e_n[r, 1:-1],
+                e_n[q, lo:hi],
+                slow[r, 1:-1],
+                slow[q, lo:hi],
+                w_pn[r, 1:-1],
+                w_pn[q, lo:hi],
+                w_ps[r, 1:-1],
+                w_ps[q, lo:hi],
+                w_ns[r, 1:-1],
+                w_ns[q, lo:hi],
+                buf[2, 1:-1],
+                buf[3, 1:-1],
+                buf[4, 1:-1],
+                i_p,
+                i_s,
+                i_n,
+                m_p,
+                one,
+                weight,
+                buf[0, 1:-1],
+                buf[1, 1:-1],
             )
             to_p, to_n = out_p[q, lo:hi], out_n[q, lo:hi]
             for j in range(columns):

@@ -114,7 +114,18 @@ class Stepper:
         noise = self._par.dtype.type(np.sqrt(2 * self.settings.noise / dt))
         key0, key1 = noise_keys(self.seed, self.count)
         kernels.rates(
-            p, n, *cells, self._par, table.links, table.shifts, self._weights, noise, key0, key1, *self._out, self._buffer
+            p,
+            n,
+            *cells,
+            self._par,
+            table.links,
+            table.shifts,
+            self._weights,
+            noise,
+            key0,
+            key1,
+            *self._out,
+            self._buffer,
         )
         if self._flow is not None:
             kappa = (self.settings.kappa_polymer, self.settings.kappa_nonsolvent)
