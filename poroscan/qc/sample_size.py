@@ -121,8 +121,10 @@ def wilson_interval(count: int, n: int, *, level: float = 0.95) -> tuple[float, 
     return (0.0 if count == 0 else middle - half), (1.0 if count == n else middle + half)
 
 
-def clopper_pearson_interval(count: int, n: int, *, level: float = 0.95) -> tuple[float, float]:
+def clopper_pearson_interval(count: float, n: float, *, level: float = 0.95) -> tuple[float, float]:
     """Exact interval of a share (never covers less than the level); (0, 1) where nothing was counted.
+
+    Fractional counts serve an effective sample size (Korn and Graubard 1998, Survey Methodology 24, 193).
 
     Raises
     ------
@@ -136,6 +138,6 @@ def clopper_pearson_interval(count: int, n: int, *, level: float = 0.95) -> tupl
     return low, high
 
 
-def _check(count: int, n: int) -> None:
+def _check(count: float, n: float) -> None:
     if not 0 <= count <= n:
         raise ValueError(f"need 0 <= count <= n, not count={count}, n={n}")
