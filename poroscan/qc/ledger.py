@@ -163,7 +163,9 @@ def quantities(path: str | Path) -> tuple[str, ...]:
 
 def _point(row: tuple[Any, ...]) -> LedgerPoint:
     value, error, df, sd = (math.nan if v is None else float(v) for v in row[6:10])
-    return LedgerPoint(*row[:6], estimate=LedgerEstimate(value, error, df, sd, int(row[10])))
+    batch, digest, measured_on, added_utc, instrument, operator = row[:6]
+    estimate = LedgerEstimate(value, error, df, sd, int(row[10]))
+    return LedgerPoint(batch, digest, measured_on, added_utc, instrument, operator, estimate)
 
 
 def _insert_batch(db: sqlite3.Connection, scan_id: int, b: LedgerBatch) -> None:
