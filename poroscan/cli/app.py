@@ -40,6 +40,8 @@ COMMANDS: tuple[str, ...] = (
     "scan",
     "inspect",
     "report",
+    "render",
+    "phases",
 )
 
 for _name in COMMANDS:
