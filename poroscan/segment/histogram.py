@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
 import numpy.typing as npt
@@ -62,7 +63,7 @@ def flat_pixels(grey: Float32, inside: BoolArray) -> BoolArray:
     return core & (slope <= 1.5 * float(np.median(slope[inside])) + 1e-6)
 
 
-def find_levels(grey: Float32, inside: BoolArray, *, residual_noise: float) -> Levels:
+def find_levels(grey: Float32, inside: BoolArray, *, residual_noise: float, hint: float | None = None) -> Levels:
     """Levels of material and pores.
 
     Parameters
@@ -73,6 +74,9 @@ def find_levels(grey: Float32, inside: BoolArray, *, residual_noise: float) -> L
         The outline's inside.
     residual_noise
         Standard deviation of the noise left after smoothing.
+    hint
+        Grey value near which the material lies, known from the rim of a particle; None where nothing is known, and then the
+        brightest large mode is the material.
 
     Returns
     -------
@@ -84,7 +88,7 @@ def find_levels(grey: Float32, inside: BoolArray, *, residual_noise: float) -> L
     if high - low < 1e-6:
         return Levels(low, 0.0, math.nan, math.nan, 0.0)
     histogram = _histogram(grey, inside, low, high, residual_noise)
-    peak = _material_peak(histogram)
+    peak = _material_peak(histogram, hint)
     material = float(histogram.centres[peak])
     spread = max(_upper_spread(histogram.every, peak) * histogram.width, residual_noise, 1e-6)
     limit, excess = _limit(histogram, peak, spread)
@@ -112,21 +116,26 @@ def _modes(counts: Counts) -> list[tuple[int, float, int, int]]:
     rises = np.diff(np.concatenate([[0.0], counts, [0.0]]))
     tops = [int(k) for k in np.nonzero((rises[:-1] > 0) & (rises[1:] <= 0))[0]]
     while len(tops) > 1:
-        valleys = [float(counts[a : b + 1].min()) for a, b in zip(tops, tops[1:], strict=False)]
-        ratios = [v / min(counts[a], counts[b]) for v, a, b in zip(valleys, tops, tops[1:], strict=False)]
+        valleys = [float(counts[a : b + 1].min()) for a, b in pairwise(tops)]
+        ratios = [v / min(counts[a], counts[b]) for v, (a, b) in zip(valleys, pairwise(tops), strict=True)]
         worst = int(np.argmax(ratios))
         if ratios[worst] < 0.8:
             break
         del tops[worst if counts[tops[worst]] < counts[tops[worst + 1]] else worst + 1]
-    cuts = [0] + [a + int(np.argmin(counts[a : b + 1])) for a, b in zip(tops, tops[1:], strict=False)] + [len(counts)]
+    cuts = [0] + [a + int(np.argmin(counts[a : b + 1])) for a, b in pairwise(tops)] + [len(counts)]
     return [(t, float(counts[cuts[i] : cuts[i + 1]].sum()), cuts[i], cuts[i + 1]) for i, t in enumerate(tops)]
 
 
-def _material_peak(histogram: _Histogram) -> int:
-    """The brightest mode that holds at least a third of the largest one's pixels."""
-    modes = _modes(histogram.flat if histogram.flat.sum() > 50 else histogram.every)
-    largest = max(mass for _, mass, _, _ in modes)
-    return max(top for top, mass, _, _ in modes if mass >= 0.35 * largest)
+def _material_peak(histogram: _Histogram, hint: float | None) -> int:
+    flat = _modes(histogram.flat) if histogram.flat.sum() > 50 else []
+    every = _modes(histogram.every)
+    if hint is None:
+        modes = flat or every
+        largest = max(mass for _, mass, _, _ in modes)
+        return max(top for top, mass, _, _ in modes if mass >= 0.35 * largest)
+    total, flats = float(histogram.every.sum()), float(histogram.flat.sum())
+    tops = [m[0] for m in flat if m[1] >= 0.03 * flats] + [m[0] for m in every if m[1] >= 0.05 * total]
+    return min(tops, key=lambda top: abs(float(histogram.centres[top]) - hint))
 
 
 def _upper_spread(counts: Counts, peak: int) -> float:
@@ -147,9 +156,9 @@ def _limit(histogram: _Histogram, peak: int, spread: float) -> tuple[float, floa
 def _pore_mode(histogram: _Histogram, material: float, spread: float, limit: float) -> float:
     """The darkest mode of flat pixels, where it is clearly apart and holds a good share of what is below the material."""
     below = histogram.flat[histogram.centres < limit].sum()
-    for top, mass, left, right in _modes(histogram.flat):
+    for top, mass, _, right in _modes(histogram.flat):
         level = float(histogram.centres[top])
-        if level >= min(limit, material - 3 * spread):
+        if level >= min(limit, material - 2 * spread):
             break
         valley = float(histogram.flat[top : right + 1].min())
         share = mass / max(below, 1.0)
@@ -158,6 +167,10 @@ def _pore_mode(histogram: _Histogram, material: float, spread: float, limit: flo
     return math.nan
 
 
-def median_below(grey: FloatArray, mask: BoolArray) -> float:
-    """Median of ``grey`` over ``mask``; NaN where the mask is empty."""
-    return float(np.median(grey[mask])) if mask.any() else math.nan
+def bright_share(grey: FloatArray, inside: BoolArray, levels: Levels) -> float:
+    """Share of flat pixels brighter than the material by more than its spread explains (four standard deviations)."""
+    flat = flat_pixels(grey.astype(np.float32, copy=False), inside)
+    count = int(flat.sum())
+    if count == 0:
+        return 0.0
+    return float((grey[flat] > levels.material + 4.0 * levels.spread).sum()) / count

@@ -18,7 +18,7 @@ from scipy import ndimage
 from skimage.filters import threshold_otsu
 
 from poroscan.section import BoolArray, FloatArray
-from poroscan.segment.closing import close_mask, distance_to, fill_holes, stable_radius
+from poroscan.segment.closing import close_mask, fill_holes, inner_radius, mouth_radius
 
 Float32 = npt.NDArray[np.float32]
 
@@ -58,7 +58,7 @@ class Candidate:
 
 
 #: Least quality of an outline.
-ACCEPT = 0.25
+ACCEPT = 0.15
 
 
 def reduce_picture(grey: Float32) -> tuple[Float32, int]:
@@ -83,15 +83,25 @@ def dark(grey: Float32) -> Float32:
 
 def texture(grey: Float32) -> Float32:
     """Feature of rough particles on smooth ground: logarithm of the local standard deviation."""
-    window = max(3, int(max(grey.shape) / 60) | 1)
+    window = texture_window(grey.shape)
     mean = ndimage.uniform_filter(grey, window)
     variance = ndimage.uniform_filter((grey - float(grey.mean())) ** 2, window) - (mean - float(grey.mean())) ** 2
     floor = 1e-8 + 0.01 * float(np.median(np.abs(variance)))
     return (0.5 * np.log(np.maximum(variance, 0) + floor)).astype(np.float32)
 
 
+def texture_window(shape: tuple[int, ...]) -> int:
+    """Edge of the window of ``texture`` in pixels, odd."""
+    return max(3, int(max(shape) / 60) | 1)
+
+
+def smoothness(grey: Float32) -> Float32:
+    """Feature of smooth particles on rough ground: the negative of ``texture``."""
+    return -texture(grey)
+
+
 OUTLINES: Mapping[str, Callable[[Float32], Float32]] = MappingProxyType(
-    {"pale": pale, "dark": dark, "texture": texture}
+    {"pale": pale, "dark": dark, "texture": texture, "smooth": smoothness}
 )
 
 
@@ -132,39 +142,104 @@ def _mad(values: FloatArray) -> float:
 
 
 def candidate(name: str, grey: Float32, *, radius: float | None) -> Candidate | None:
-    """The candidate of one named way, or None where the feature does not separate anything."""
+    """The candidate of one named way, or None where the feature does not separate anything.
+
+    Where the radius is free and the bodies are ragged, twice the radius is tried as well.
+    """
     feature = OUTLINES[name](grey)
     level, separation = half_level(feature)
     if not math.isfinite(level) or separation < 2.0:
         return None
-    raw = feature > level
-    raw = ndimage.binary_opening(raw, np.ones((2, 2)))
-    if radius is None:
-        radius = stable_radius(raw)
+    first = _closed(name, feature, level, radius)
+    ground = feature[~first.bodies]
+    if name in BY_GREY and ground.size > 100:
+        level = _clear_of_ground(ground, feature[first.raw], level)
+        first = _closed(name, feature, level, radius)
+    if radius is not None or first.quality >= 0.6:
+        return first
+    return max(first, _closed(name, feature, level, 2.0 * first.radius), key=lambda c: c.quality)
+
+
+def _closed(name: str, feature: Float32, level: float, radius: float | None) -> Candidate:
+    raw = ndimage.binary_opening(feature > level, np.ones((2, 2)))
+    radius = mouth_radius(raw) if radius is None else radius
     bodies = fill_holes(close_mask(raw, radius))
-    return Candidate(name, feature, level, raw, bodies, radius, quality(raw, bodies))
+    if name in BY_GREY:
+        bodies = _sharp_bodies(feature, raw, bodies)
+    return Candidate(name, feature, level, raw, bodies, radius, quality(name, feature, raw, bodies))
 
 
-def quality(raw: BoolArray, bodies: BoolArray) -> float:
+def _clear_of_ground(ground: Float32, material: Float32, level: float) -> float:
+    """The level raised above a rough ground, but not beyond three quarters of the way to the particle."""
+    middle, top = float(np.median(ground)), float(np.median(material))
+    return min(max(level, middle + 2.5 * _mad(ground)), middle + 0.75 * (top - middle))
+
+
+def _sharp_bodies(feature: Float32, raw: BoolArray, bodies: BoolArray) -> BoolArray:
+    """Bodies with a sharp border; blotches of the ground fade out instead.
+
+    Sharpness is the range of the feature within two pixels of the border over the contrast of particle and ground.
+    """
+    labels, count = ndimage.label(bodies)
+    if count == 0 or bodies.all():
+        return bodies
+    contrast = float(np.median(feature[raw])) - float(np.median(feature[~bodies]))
+    rim = bodies & ~ndimage.binary_erosion(bodies, iterations=3, border_value=1)
+    border = raw & ~ndimage.binary_erosion(raw, border_value=1) & rim
+    span = ndimage.maximum_filter(feature, 5) - ndimage.minimum_filter(feature, 5)
+    keep = np.zeros(count + 1, bool)
+    present = np.unique(labels[border])
+    keep[present] = ndimage.median(span, np.where(border, labels, 0), present) >= SHARP * contrast
+    keep[0] = False
+    return keep[labels]
+
+
+def quality(name: str, feature: Float32, raw: BoolArray, bodies: BoolArray) -> float:
     """How well a candidate looks like particles before a ground, 0…1.
 
-    The ground must reach the frame, be wide, and be free of the particle's class; the bodies must bulge towards it.
+    The ground must reach the frame and be much wider than the pores; the bodies must be compact and bulge towards it. Many plain
+    dark bodies are the pores of an interior view, and very many bodies of any kind its structure.
     """
     ground = ~bodies
-    share = float(ground.mean())
-    if share < 0.02 or not bodies.any():
+    if float(ground.mean()) < 0.02 or not bodies.any():
         return 0.0
-    frame = np.concatenate([ground[0], ground[-1], ground[:, 0], ground[:, -1]])
-    width = float(_inner_radius(ground))
-    hole = float(_inner_radius(bodies & ~raw)) if (bodies & ~raw).any() else 0.0
-    if width < 1.5 * hole or float(frame.mean()) < 0.08:
+    frame = float(np.concatenate([ground[0], ground[-1], ground[:, 0], ground[:, -1]]).mean())
+    holes = bodies & ~raw
+    width = inner_radius(ground)
+    hole = inner_radius(holes) if holes.any() else 0.0
+    if frame < 0.08 or width < max(2.5 * hole, 0.04 * math.sqrt(bodies.size)):
         return 0.0
-    bulge = _solidity(bodies) - _solidity(ground)
-    return float(np.clip(0.5 + 0.5 * float(frame.mean()) + bulge - 0.5, 0.0, 1.0))
+    solid = _solidity(bodies)
+    if solid < 0.8 or _like_pores(name, feature, raw, bodies):
+        return 0.0
+    return float(np.clip(0.5 * frame + solid - _solidity(ground), 0.0, 1.0))
 
 
-def _inner_radius(mask: BoolArray) -> float:
-    return float(distance_to(~mask).max()) if not mask.all() else float(min(mask.shape))
+def _like_pores(name: str, feature: Float32, raw: BoolArray, bodies: BoolArray) -> bool:
+    """Whether bodies are rather the pores, or the cells, of an interior view."""
+    labels, _ = ndimage.label(bodies)
+    sizes = np.bincount(labels.ravel())[1:]
+    large = int((sizes > 0.04 * sizes.max()).sum())
+    if large > (MANY if name in BY_GREY else MANY // 8):
+        return True
+    if name != "dark":
+        return False
+    own = feature[bodies & raw]
+    black = float(feature.max()) - float(np.median(own)) < 0.1 * (
+        float(np.median(own)) - float(np.median(feature[~raw]))
+    )
+    plain = float((bodies & ~raw).sum()) < 0.04 * float(bodies.sum())
+    return (plain or black) and (large > 3 or float(sizes.max()) < 0.08 * bodies.size)
+
+
+#: Ways that draw the outline by grey value.
+BY_GREY = ("pale", "dark")
+
+#: Least sharpness of a body's border.
+SHARP = 0.7
+
+#: More bodies than this are the structure of an interior, not particles.
+MANY = 60
 
 
 def _solidity(mask: BoolArray) -> float:
@@ -186,6 +261,9 @@ def _solidity(mask: BoolArray) -> float:
 def find_bodies(grey: Float32, choice: str, *, radius: float | None) -> Candidate | None:
     """The best candidate among the ways asked for, on the reduced picture; None where none is good enough."""
     names = tuple(OUTLINES) if choice == "auto" else (choice,)
-    found = [c for name in names if (c := candidate(name, grey, radius=radius)) is not None]
-    found = [c for c in found if c.quality >= ACCEPT or choice != "auto"]
-    return max(found, key=lambda c: c.quality, default=None)
+    found = {name: c for name in names if (c := candidate(name, grey, radius=radius)) is not None}
+    if choice != "auto":
+        return found.get(choice)
+    good = [c for c in found.values() if c.quality >= ACCEPT]
+    # an outline drawn by grey value is exact to the pixel, one by texture to its window: it is the last resort
+    return max(good, key=lambda c: c.quality - (0.0 if c.name in BY_GREY else 0.3), default=None)

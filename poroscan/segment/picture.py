@@ -11,10 +11,11 @@ from scipy import ndimage
 
 from poroscan.section import BoolArray, Picture, Section, View
 from poroscan.segment.cleanup import Float32, bands, noise_level, shading, smooth
-from poroscan.segment.closing import close_mask, distance_to, fill_holes, split_touching
+from poroscan.segment.closing import close_body, distance_to, fill_holes, split_touching
 from poroscan.segment.frame import frame_weight
-from poroscan.segment.outline import Candidate, find_bodies, reduce_picture
-from poroscan.segment.pores import PORES, Inside, Pores, fixed, levels_of, threshold_of
+from poroscan.segment.histogram import Levels, bright_share, find_levels
+from poroscan.segment.outline import BY_GREY, Candidate, find_bodies, reduce_picture, texture_window
+from poroscan.segment.pores import PORES, Inside, Pores, fixed, threshold_of
 from poroscan.segment.result import Segmentation, Threshold
 from poroscan.segment.settings import SegmentSettings
 from poroscan.segment.view import arc_points, fit_circle, is_edge
@@ -29,6 +30,7 @@ class _Found:
     view: View
     labels: Labels
     method: str
+    raw: BoolArray | None = None
     split: frozenset[int] = frozenset()
     flags: tuple[str, ...] = ()
     notes: tuple[str, ...] = ()
@@ -114,16 +116,16 @@ def _draw(grey: Float32, best: Candidate, step: int, settings: SegmentSettings) 
     connected, _ = ndimage.label(bodies)
     labels = np.zeros(grey.shape, np.int32)
     split, notes = set(), []
-    feature = ndimage.gaussian_filter(grey, 1.0) * (-1 if best.name == "dark" else 1)
-    radius = best.radius * step if settings.closing_radius_px is None else settings.closing_radius_px
+    feature = _fine_feature(grey, best, step)
+    radius = settings.closing_radius_px
     for k, box in enumerate(ndimage.find_objects(coarse), start=1):
         pad = 6
         rows, columns = (
             slice(max(0, (s.start - pad) * step), min(n, (s.stop + pad) * step))
             for s, n in zip(box, grey.shape, strict=True)
         )
-        piece = _enlarge(coarse, rows, columns, step)
-        mask, gain = _fine_mask(piece, k, feature[rows, columns], best, step, radius)
+        piece = _enlarge(coarse, grey.shape, step)[rows, columns]
+        mask, gain, used = _fine_mask(piece, k, feature[rows, columns], best, step, radius)
         if not mask.any():
             continue
         number = int(labels.max()) + 1
@@ -131,37 +133,57 @@ def _draw(grey: Float32, best: Candidate, step: int, settings: SegmentSettings) 
         own = np.unique(coarse[connected == connected[coarse == k][0]])
         if (own > 0).sum() > 1:
             split.add(number)
-        notes.append(f"particle {number}: closing by {radius:.0f} pixels added {100 * gain:.1f} % to the area")
+        notes.append(f"particle {number}: closing by {used:.0f} pixels added {100 * gain:.1f} % to the area")
     labels = _renumber(labels)
     if not labels.any():
         return _Found("whole", labels, best.name, flags=("no_particle",))
-    return _Found(_view_of(labels, settings), labels, f"outline: {best.name}", frozenset(split), (), tuple(notes))
+    own_grey = feature if best.name in BY_GREY else None
+    return _Found(
+        _view_of(labels, settings), labels, f"outline: {best.name}", own_grey, frozenset(split), (), tuple(notes)
+    )
 
 
-def _enlarge(coarse: Labels, rows: slice, columns: slice, step: int) -> Labels:
-    r = np.arange(rows.start, rows.stop) // step
-    c = np.arange(columns.start, columns.stop) // step
-    return coarse[np.ix_(r, c)]
+def _enlarge(coarse: npt.NDArray[np.generic], shape: tuple[int, ...], step: int) -> npt.NDArray[np.generic]:
+    return np.repeat(np.repeat(coarse, step, axis=0), step, axis=1)[: shape[0], : shape[1]]
+
+
+def _fine_feature(grey: Float32, best: Candidate, step: int) -> BoolArray:
+    """Pixels that belong to a particle by their own grey value, at full resolution."""
+    smoothed = ndimage.gaussian_filter(grey, 1.0)
+    if best.name == "pale":
+        return smoothed > best.level
+    if best.name == "dark":
+        return smoothed < -best.level
+    ground = smoothed[_enlarge(ndimage.binary_erosion(~best.bodies, iterations=3, border_value=1), grey.shape, step)]
+    if ground.size < 50:
+        return np.zeros(grey.shape, bool)
+    middle = float(np.median(ground))
+    spread = 1.4826 * float(np.median(np.abs(ground - middle)))
+    return np.abs(smoothed - middle) > 3.5 * spread + 1e-6
 
 
 def _fine_mask(
-    piece: Labels, k: int, feature: Float32, best: Candidate, step: int, radius: float
-) -> tuple[BoolArray, float]:
+    piece: Labels, k: int, raw: BoolArray, best: Candidate, step: int, radius: float | None
+) -> tuple[BoolArray, float, float]:
     body = piece == k
-    if best.name == "texture":
-        return body, 0.0
-    near = distance_to(body) <= 3 * step
     others = (piece > 0) & ~body
-    deep = distance_to(~body) > 3 * step
-    raw = ((feature > best.level) & near & ~others) | deep
-    filled = fill_holes(raw)
-    closed = fill_holes(close_mask(filled, radius)) & ~others
-    labels, count = ndimage.label(closed)
-    if count > 1:
-        sizes = np.bincount(labels.ravel())
-        sizes[0] = 0
-        closed = labels == int(sizes.argmax())
-    return closed, float(closed.sum() - (filled & closed).sum()) / max(float(closed.sum()), 1.0)
+    band = 3 * step if best.name in BY_GREY else (texture_window(best.raw.shape) // 2 + 1) * step
+    grown = distance_to(body) <= (3 * step if best.name in BY_GREY else step)
+    deep = distance_to(~body) > band
+    filled = fill_holes((raw & grown & ~others) | deep)
+    filled = _largest(ndimage.binary_opening(filled, np.ones((3, 3))) | deep)
+    closed, used = close_body(filled, radius=radius)
+    closed = closed & ~others
+    return closed, float((closed & ~filled).sum()) / max(float(closed.sum()), 1.0), used
+
+
+def _largest(mask: BoolArray) -> BoolArray:
+    labels, count = ndimage.label(mask)
+    if count <= 1:
+        return mask
+    sizes = np.bincount(labels.ravel())
+    sizes[0] = 0
+    return labels == int(sizes.argmax())
 
 
 def _drop_dust(bodies: BoolArray, settings: SegmentSettings, step: int) -> BoolArray:
@@ -235,7 +257,9 @@ def _section(
         mask = np.asarray(given_pores[window], bool) & particle
         result, threshold = Pores(mask, mask, mask, math.nan, math.nan, "given pores"), None
     else:
-        result, threshold = _find_pores(grey, particle, noise, settings)
+        result, threshold = _find_pores(
+            grey, particle, noise, settings, None if found.raw is None else found.raw[window]
+        )
     banded = threshold is not None
     cut = _cut(particle, window, picture.grey.shape)
     flags = dict.fromkeys((*result.flags, *_view_flags(found, k, cut)))
@@ -283,25 +307,46 @@ def _weight(particle: BoolArray, frame: tuple[int, ...], cut: bool, view: View) 
 
 
 def _find_pores(
-    grey: Float32, particle: BoolArray, noise: float, settings: SegmentSettings
+    grey: Float32, particle: BoolArray, noise: float, settings: SegmentSettings, raw: BoolArray | None
 ) -> tuple[Pores, Threshold | None]:
     spread = float(np.subtract(*np.percentile(grey[particle], [99, 1])))
     smoothed, sigma = smooth(grey, noise, spread) if settings.denoise else (grey, 0.0)
     if settings.flatten:
         smoothed = smoothed - shading(smoothed, particle)
     residual = noise / (2 * sigma * math.sqrt(math.pi)) if sigma else noise
+    hint = _rim_grey(smoothed, particle, raw)
+    levels = find_levels(smoothed, particle, residual_noise=residual, hint=hint)
     if settings.destripe:
-        first = levels_of(smoothed, particle, residual)
-        material = particle & (np.abs(smoothed - first.material) < 2.5 * first.spread)
+        material = particle & (np.abs(smoothed - levels.material) < 2.5 * levels.spread)
         smoothed = smoothed - bands(smoothed, material)
-    bright = settings.pore_shade == "bright"
-    turned = -smoothed if bright else smoothed
-    inside = Inside(turned, particle, residual, levels_of(turned, particle, residual))
+        levels = find_levels(smoothed, particle, residual_noise=residual, hint=hint)
+    bright = settings.pore_shade == "bright" or (
+        settings.pore_shade == "auto" and _bright_pores(smoothed, particle, levels)
+    )
+    if bright:
+        smoothed = -smoothed
+        levels = find_levels(smoothed, particle, residual_noise=residual, hint=-levels.material)
+    inside = Inside(smoothed, particle, residual, levels)
     if settings.threshold is not None:
         result = fixed(inside, settings, -settings.threshold if bright else settings.threshold)
     else:
         result = PORES["auto" if settings.pores == "trained" else settings.pores](inside, settings)
     return result, threshold_of(result, bright=bright)
+
+
+def _rim_grey(grey: Float32, particle: BoolArray, raw: BoolArray | None) -> float | None:
+    """Grey value of the material, read at the rim, which the outline has shown to be unlike the ground."""
+    if raw is None:
+        return None
+    depth = distance_to(~particle)
+    rim = raw & particle & (depth > 3) & (depth <= max(8.0, 0.12 * float(depth.max())))
+    return float(np.median(grey[rim])) if int(rim.sum()) >= 50 else None
+
+
+def _bright_pores(grey: Float32, particle: BoolArray, levels: Levels) -> bool:
+    """Pores are taken as bright only where hardly anything is darker than the material and a good deal is brighter."""
+    share = bright_share(grey, particle, levels)
+    return levels.excess < 0.03 and share > 0.03 and share > 3.0 * levels.excess
 
 
 def _mean_threshold(found: list[tuple[Threshold | None, float]]) -> Threshold | None:

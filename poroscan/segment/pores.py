@@ -13,7 +13,7 @@ from scipy import ndimage
 from skimage.filters import threshold_otsu
 
 from poroscan.section import BoolArray
-from poroscan.segment.histogram import Levels, find_levels
+from poroscan.segment.histogram import Levels
 from poroscan.segment.result import Threshold
 from poroscan.segment.settings import SegmentSettings
 
@@ -151,11 +151,40 @@ def _banded(
     inside: Inside, settings: SegmentSettings, mask_at: _MaskAt, level: float, uncertainty: float, method: str
 ) -> Pores:
     least = settings.min_pore_px or 4
-    masks = [tidy(mask_at(shift) & inside.mask, inside.mask, least) for shift in (0.0, -uncertainty, uncertainty)]
+    middle = _half_height(inside)
+    masks = []
+    for shift in (0.0, -uncertainty, uncertainty):
+        rough = tidy(mask_at(shift) & inside.mask, inside.mask, least)
+        masks.append(tidy(_on_the_slope(rough, inside, middle + shift), inside.mask, least))
     pores = masks[0]
     share = float(pores.sum()) / max(float(inside.mask.sum()), 1.0)
     flags = ("no_pores",) if share == 0.0 else (("all_pores",) if share > 0.97 else ())
     return Pores(pores, masks[1] & pores, masks[2] | pores, level, uncertainty, method, flags)
+
+
+#: Reach in pixels within which the two sides of an edge are looked for, and within which a border may move.
+REACH = 3
+
+
+def _half_height(inside: Inside) -> Float32:
+    """Midway between the darkest and the brightest grey value within ``REACH`` pixels, inside the outline only."""
+    size = 2 * REACH + 1
+    top = ndimage.maximum_filter(np.where(inside.mask, inside.grey, np.float32(-np.inf)), size)
+    bottom = ndimage.minimum_filter(np.where(inside.mask, inside.grey, np.float32(np.inf)), size)
+    middle = np.zeros_like(inside.grey)
+    np.add(top, bottom, out=middle, where=inside.mask)
+    return middle * np.float32(0.5)
+
+
+def _on_the_slope(pores: BoolArray, inside: Inside, middle: Float32) -> BoolArray:
+    """Move the borders of pores to half height of their own slope.
+
+    A bright edge, a shallow pore or a small one shifts the crossing of a common threshold away from the steepest place; half
+    height between the two sides stays there.
+    """
+    wall = inside.mask & ~pores
+    near = ndimage.binary_dilation(pores, iterations=2) & ndimage.binary_dilation(wall, iterations=2) & inside.mask
+    return np.where(near, inside.grey < middle, pores)
 
 
 def _none(inside: Inside, method: str, flags: tuple[str, ...]) -> Pores:
@@ -175,11 +204,6 @@ def _without_small(mask: BoolArray, least: int) -> BoolArray:
     keep = np.bincount(labels.ravel()) >= least
     keep[0] = False
     return keep[labels]
-
-
-def levels_of(grey: Float32, mask: BoolArray, noise: float) -> Levels:
-    """Levels of material and pores inside an outline; see ``histogram.find_levels``."""
-    return find_levels(grey, mask, residual_noise=noise)
 
 
 def threshold_of(pores: Pores, *, bright: bool) -> Threshold | None:

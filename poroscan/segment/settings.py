@@ -7,7 +7,7 @@ from dataclasses import dataclass
 from typing import ClassVar, Literal
 
 ViewChoice = Literal["auto", "whole", "edge", "interior"]
-OutlineChoice = Literal["auto", "pale", "dark", "texture"]
+OutlineChoice = Literal["auto", "pale", "dark", "texture", "smooth"]
 PoreChoice = Literal["auto", "global", "local", "two_level", "trained"]
 ShadeChoice = Literal["auto", "dark", "bright"]
 
@@ -21,7 +21,8 @@ class SegmentSettings:
     view
         What the picture shows: ``whole`` particles, an ``edge`` of one, or the ``interior`` of one; ``auto`` finds out.
     outline
-        How particles differ from their surroundings: ``pale`` on dark, ``dark`` on pale, by ``texture``; ``auto`` tries all.
+        How particles differ from their surroundings: ``pale`` on dark, ``dark`` on pale, by ``texture`` (rough on
+        smooth) or ``smooth`` (on rough); ``auto`` tries all.
     closing_radius_px
         Mouths of surface pores narrower than twice this radius are closed, so that the pore stays inside the outline; None
         chooses it from the picture. Its effect on the area is reported.

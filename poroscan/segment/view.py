@@ -93,19 +93,20 @@ def reaches_frame(particle: BoolArray) -> bool:
 def is_edge(labels: npt.NDArray[np.int32]) -> bool:
     """True where the picture shows a piece of one particle's edge rather than particles.
 
-    No particle is whole, and the largest holds at least a quarter of the picture but less than 0.8 of its own fitted circle.
+    No particle of note is whole, and the largest holds at least an eighth of the picture but less than 0.8 of its own fitted
+    circle.
     """
     count = int(labels.max())
     if count == 0:
         return False
-    boxes = ndimage.find_objects(labels)
+    sizes = np.bincount(labels.ravel(), minlength=count + 1)[1:]
     rows, columns = labels.shape
-    for box in boxes:
-        if box and box[0].start > 0 and box[1].start > 0 and box[0].stop < rows and box[1].stop < columns:
+    for box, size in zip(ndimage.find_objects(labels), sizes, strict=True):
+        inside = box and box[0].start > 0 and box[1].start > 0 and box[0].stop < rows and box[1].stop < columns
+        if inside and size > 0.1 * sizes.max():
             return False
-    sizes = np.bincount(labels.ravel())[1:]
     largest = int(np.argmax(sizes)) + 1
-    if sizes[largest - 1] < 0.25 * labels.size:
+    if sizes[largest - 1] < 0.125 * labels.size:
         return False
     circle = fit_circle(arc_points(labels == largest))
     return circle is None or sizes[largest - 1] < 0.8 * math.pi * circle.radius**2
