@@ -2,6 +2,11 @@
 
 settings          what a user can choose
 part, shared      what a module hands back; arrays that several need
+radial            porosity from the outline inwards; skin, polar, elongation are its parts
+two_point         pair counts in any outline; correlation and integral_range sum them up
+lineal, cluster   lineal path, two-point cluster function
+structure_factor  S(q), its peak, the characteristic spacing
+uncertainty       intervals from blocks, combination after the GUM
 """
 
 from __future__ import annotations
@@ -13,7 +18,7 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from poroscan.measure import porosity
+from poroscan.measure import cluster, correlation, lineal, porosity, radial, structure_factor
 from poroscan.measure.settings import MeasureSettings
 from poroscan.measure.shared import Shared
 from poroscan.quantities import PORE_COLUMNS, Curve, Estimate, Record
@@ -54,7 +59,7 @@ def measure_section(
     estimates: dict[str, Estimate] = {}
     flags = dict.fromkeys(section.flags)
     curves: list[Curve] = []
-    for module in (porosity,):
+    for module in (porosity, radial, correlation, lineal, cluster, structure_factor):
         part = module.part(section, settings, shared=shared, rng=generator)
         estimates.update(part.estimates)
         curves.extend(part.curves)
