@@ -49,7 +49,7 @@ OVERVIEW_PX = 520
 REMEDIES: Mapping[str, str] = {
     "no_particle": FLAGS["no_particle"].remedy,
     "failed": "this is a defect of the program or of the file; the other pictures are done",
-    "lost": "its process was ended twice, most often for lack of memory; give fewer --workers or a smaller picture",
+    "lost": "most often for lack of memory: give fewer --workers or a smaller picture",
 }
 
 
@@ -173,7 +173,9 @@ def commit_lost(task: ImageTask) -> ImageOutcome:
         The picture.
     """
     sha256, key = fingerprint(task)
-    files = _failure(task, sha256, "lost", "the process that measured it died, twice", REMEDIES["lost"])
+    files = _failure(
+        task, sha256, "lost", "the process that measured it died, also when it worked on nothing else", REMEDIES["lost"]
+    )
     RunFolder(task.run).commit(task.name, files)
     return _outcome_of(task, json.loads(files["image.json"]) | {"key": key})
 

@@ -51,7 +51,7 @@ def run_tasks(
     Yields
     ------
     tuple
-        The task and its result; None where the process died twice on it.
+        The task and its result; None where a process died that worked on it alone.
     """
     if workers == 0:
         for task in tasks:
