@@ -1,0 +1,124 @@
+"""Masks from anyone: what the render command accepts, turned into pores, particle and depth."""
+
+from __future__ import annotations
+
+import zipfile
+from dataclasses import dataclass
+from pathlib import Path
+
+import numpy as np
+import numpy.typing as npt
+import tifffile
+from PIL import Image, UnidentifiedImageError
+
+from poroscan.errors import InputError
+from poroscan.render.depth import FloatImage, depth_below
+from poroscan.section import BoolArray
+
+_ENDINGS = (".npz", ".npy", ".png", ".bmp", ".tif", ".tiff")
+Image.MAX_IMAGE_PIXELS = 1 << 28
+
+
+@dataclass(frozen=True, eq=False)
+class Masks:
+    """A two-dimensional cut: pores, particle (bool or numbers), and depth below it where a volume was given."""
+
+    pores: BoolArray
+    particle: npt.NDArray[np.bool_] | npt.NDArray[np.integer]
+    depth: FloatImage | None = None
+
+
+def read_masks(path: Path, *, level: float | None = None, plane: int | None = None) -> Masks:
+    """Read a field or mask.
+
+    Parameters
+    ----------
+    path
+        ``.npz`` with ``pores`` and, if there are surroundings, ``particle`` (bool, or particle numbers); or one array as
+        ``.npy``, ``.npz`` or picture. A single array of two values is a pore mask (the higher value is pore) that
+        fills the picture; one of three values shows surroundings, polymer and pore in rising order; any other is
+        the polymer fraction, pore where it is under ``level``.
+    level
+        Polymer fraction that separates pore from polymer; None takes the middle between the least and the greatest value.
+    plane
+        Plane of a volume that is cut and looked at; None takes the middle one.
+
+    Raises
+    ------
+    InputError
+        If the file cannot be read as one of these.
+    """
+    arrays = _arrays(path)
+    particle: _Particle
+    if "pores" in arrays:
+        pores = arrays["pores"].astype(bool)
+        particle = _numbers(path, arrays.get("particle", np.ones(pores.shape, dtype=bool)))
+    else:
+        if len(arrays) != 1:
+            raise _bad(path, f"holds arrays {', '.join(arrays) or 'none'}", "name them pores and particle")
+        pores, particle = _of_values(path, next(iter(arrays.values())), level)
+    if pores.shape != particle.shape or pores.ndim not in (2, 3) or pores.size == 0:
+        raise _bad(
+            path, f"has pores of shape {pores.shape} and a particle of {particle.shape}", "give two or three dimensions"
+        )
+    return _cut(path, pores & (particle > 0), particle, plane)
+
+
+_Particle = npt.NDArray[np.bool_] | npt.NDArray[np.integer]
+
+
+def _numbers(path: Path, particle: npt.NDArray[np.generic]) -> _Particle:
+    if particle.dtype.kind not in "bui" or particle.ndim == 0:
+        raise _bad(path, f"has a particle of {particle.dtype} values", "give a bool mask or particle numbers")
+    # Every connected piece of a bool mask is a particle; numbers are kept as they are.
+    return particle.astype(bool) if particle.dtype.kind == "b" else particle.astype(np.int64)
+
+
+def _cut(path: Path, pores: BoolArray, particle: _Particle, plane: int | None) -> Masks:
+    if pores.ndim == 2:
+        if plane is not None:
+            raise _bad(path, "is two-dimensional", "leave out --plane")
+        return Masks(pores, particle)
+    index = pores.shape[0] // 2 if plane is None else plane
+    if not 0 <= index < pores.shape[0]:
+        raise _bad(path, f"has no plane {index}", f"give one from 0 to {pores.shape[0] - 1}")
+    return Masks(pores[index], particle[index], np.where(pores[index], depth_below(pores, plane=index), 0.0))
+
+
+def _of_values(path: Path, array: npt.NDArray[np.generic], level: float | None) -> tuple[BoolArray, BoolArray]:
+    if array.dtype.kind not in "buif":
+        raise _bad(path, f"holds {array.dtype} values", "give numbers")
+    values = array.astype(np.float64)
+    if not np.isfinite(values).all():
+        raise _bad(path, "holds values that are not finite", "replace them")
+    distinct = np.unique(values)
+    if level is None and len(distinct) <= 2:
+        return values > distinct[0], np.ones(values.shape, dtype=bool)
+    if level is None and len(distinct) == 3:
+        return values == distinct[2], values > distinct[0]
+    threshold = (distinct[0] + distinct[-1]) / 2 if level is None else level
+    return values < threshold, np.ones(values.shape, dtype=bool)
+
+
+def _arrays(path: Path) -> dict[str, npt.NDArray[np.generic]]:
+    ending = path.suffix.lower()
+    if not path.is_file():
+        raise _bad(path, "is not there", "check the path")
+    if ending not in _ENDINGS:
+        raise _bad(path, f"ends in {ending or 'nothing'}", f"give one of {', '.join(_ENDINGS)}")
+    try:
+        if ending == ".npz":
+            with np.load(path, allow_pickle=False) as file:
+                return {name: file[name] for name in file.files}
+        if ending == ".npy":
+            return {"field": np.load(path, allow_pickle=False)}
+        if ending.startswith(".tif"):
+            return {"field": tifffile.imread(path)}
+        with Image.open(path) as image:
+            return {"field": np.asarray(image.convert("L"))}
+    except (OSError, ValueError, zipfile.BadZipFile, UnidentifiedImageError, tifffile.TiffFileError) as error:
+        raise _bad(path, f"cannot be read ({error})", "write it again") from None
+
+
+def _bad(path: Path, wrong: str, remedy: str) -> InputError:
+    return InputError(f"{path.name} {wrong}; {remedy}")
