@@ -25,6 +25,8 @@ EXIT_WRONG_USE = 2
 EXIT_UNREADABLE = 3
 EXIT_STOPPED = 130
 
+_STOPPED = "stopped; give the same command again, it continues where it stopped"
+
 app = typer.Typer(
     name="poroscan",
     help="Pore structure of porous particles: from SEM cross-sections to a report.",
@@ -79,9 +81,11 @@ def main(argv: Sequence[str] | None = None) -> int:
         _complain(str(error))
         return EXIT_UNREADABLE if isinstance(error, InputError) else EXIT_WRONG_USE
     except typer.Exit as stop:
+        if stop.exit_code == EXIT_STOPPED:  # some versions of the command-line library turn an interrupt into this
+            _complain(_STOPPED)
         return stop.exit_code
     except (KeyboardInterrupt, typer.Abort):
-        _complain("stopped; give the same command again to continue")
+        _complain(_STOPPED)
         return EXIT_STOPPED
     except BrokenPipeError:  # the reader of the output has gone, which is no error
         sys.stdout = open(os.devnull, "w")  # noqa: SIM115 (the interpreter flushes it when it ends)

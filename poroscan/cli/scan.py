@@ -80,7 +80,7 @@ def _tell(outcome: RunOutcome, *, quiet: bool, as_json: bool) -> None:
         print(json.dumps(_summary(outcome), ensure_ascii=True))
     elif not quiet:
         kept = f" ({outcome.kept} kept from before)" if outcome.kept else ""
-        _say(f"{outcome.images} pictures{kept}, {outcome.particles} particles measured")
+        _say(f"{_count(outcome.images, 'picture')}{kept}, {_count(outcome.particles, 'particle')} measured")
         print(outcome.path / "report.html")
 
 
@@ -94,6 +94,10 @@ def _summary(outcome: RunOutcome) -> dict[str, Any]:
         "problems": list(outcome.problems),
         "exit_code": outcome.exit_code,
     }
+
+
+def _count(number: int, noun: str) -> str:
+    return f"{number} {noun}" if number == 1 else f"{number} {noun}s"
 
 
 def _say(text: str) -> None:

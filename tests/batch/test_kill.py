@@ -58,7 +58,7 @@ def _kill_and_resume(tmp_path: Path, rng: np.random.Generator, *, kills: int, pi
             in_the_middle += process.poll() is None
             os.kill(process.pid, signal.SIGKILL)
             process.wait()
-        gone, alive = psutil.wait_procs(children, timeout=10)
+        _, alive = psutil.wait_procs(children, timeout=10)
         assert not alive, "a worker outlived its parent"
     assert in_the_middle >= kills // 2
     assert _finish(folder, run, workers=workers) == truth
