@@ -81,9 +81,7 @@ def main(argv: Sequence[str] | None = None) -> int:
         _complain(str(error))
         return EXIT_UNREADABLE if isinstance(error, InputError) else EXIT_WRONG_USE
     except typer.Exit as stop:
-        if stop.exit_code == EXIT_STOPPED:  # some versions of the command-line library turn an interrupt into this
-            _complain(_STOPPED)
-        return stop.exit_code
+        code = stop.exit_code
     except (KeyboardInterrupt, typer.Abort):
         _complain(_STOPPED)
         return EXIT_STOPPED
@@ -96,6 +94,8 @@ def main(argv: Sequence[str] | None = None) -> int:
             raise
         _complain(_usage_line(error, words()))
         return EXIT_WRONG_USE
+    if code == EXIT_STOPPED:  # some versions of the command-line library turn an interrupt into this
+        _complain(_STOPPED)
     return code if isinstance(code, int) else EXIT_DONE
 
 
