@@ -58,7 +58,7 @@ def draw_triangle(diagram: PhaseDiagram, formulation: Formulation) -> Figure:
     axes.set_aspect("equal")
     axes.set_axis_off()
     axes.set_xlim(-0.1, 1.1)
-    axes.set_ylim(-0.17, 0.92)
+    axes.set_ylim(-0.12, 0.92)
     _frame(axes, formulation)
     _regions(axes, diagram)
     _spinodal(axes, diagram)
