@@ -3,11 +3,15 @@
 from __future__ import annotations
 
 from pathlib import Path
-from typing import Annotated
+from typing import TYPE_CHECKING, Annotated, cast
 
 import typer
 
-from poroscan.errors import SettingsError
+from poroscan.errors import InputError, SettingsError
+
+if TYPE_CHECKING:
+    from poroscan.render.reading import Masks
+    from poroscan.render.writing import Scale
 
 
 def command(
@@ -15,7 +19,7 @@ def command(
         Path,
         typer.Argument(
             metavar="FIELD",
-            help="Mask or field: .npz (pores, particle), .npy, .png, .tif; a volume is cut through its middle.",
+            help="Mask (.npz with pores and particle, .npy, .png, .tif) or simulated field (.npz, .h5, .vti, …).",
             show_default=False,
         ),
     ],
@@ -25,7 +29,9 @@ def command(
         str,
         typer.Option("--look", help="secondary, backscatter, resin, bright_pores, charging, textured or ion_polished."),
     ] = "secondary",
-    pixel_size: Annotated[float, typer.Option("--pixel-size", help="Micrometres per pixel.")] = 1.0,
+    pixel_size: Annotated[
+        float | None, typer.Option("--pixel-size", help="Micrometres per pixel; by default what the field says.")
+    ] = None,
     bar: Annotated[str, typer.Option("--bar", help="none, burnt (into the picture) or banner (under it).")] = "none",
     scale: Annotated[
         str, typer.Option("--scale", help="How the file says its pixel size: ome, resolution or none.")
@@ -33,7 +39,7 @@ def command(
     jpeg: Annotated[bool, typer.Option("--jpeg", help="Write a JPEG, which says no pixel size.")] = False,
     plane: Annotated[int | None, typer.Option("--plane", help="Plane of a volume; the middle one by default.")] = None,
     level: Annotated[
-        float | None, typer.Option("--level", help="Polymer fraction under which a field is pore.")
+        float | None, typer.Option("--level", help="Polymer fraction under which a simulated field is pore.")
     ] = None,
     change: Annotated[
         list[str] | None, typer.Option("--set", metavar="NAME=VALUE", help="Any other setting, such as dose=120.")
@@ -41,20 +47,47 @@ def command(
     quiet: Annotated[bool, typer.Option("--quiet", help="Print nothing.")] = False,
 ) -> int:
     """Picture a field as a scanning electron microscope would, and write its true masks beside it."""
-    changes = {"pixel_size_um": repr(pixel_size), "bar": bar, **_changes(change or [])}
+    from poroscan.render.job import render_to, settings_from
+
     if scale not in ("ome", "resolution", "none"):
         raise SettingsError(f"--scale is {scale!r}; give ome, resolution or none")
-
-    from poroscan.render.job import render_to, settings_from
-    from poroscan.render.reading import read_masks
-
-    settings = settings_from(look, changes)
-    masks = read_masks(field, level=level, plane=plane)
-    _, files = render_to(out, field.stem, masks, settings, seed=seed, scale=scale, jpeg=jpeg)  # type: ignore[arg-type]
+    changes = _changes(change or [])
+    settings_from(look, {"bar": bar, **changes})  # wrong options are told before anything is read
+    masks, stated = _masks(field, level=level, plane=plane)
+    size = pixel_size if pixel_size is not None else stated
+    settings = settings_from(look, {"pixel_size_um": repr(1.0 if size is None else size), "bar": bar, **changes})
+    _, files = render_to(
+        out,
+        field.stem,
+        masks,
+        settings,
+        seed=seed,
+        scale=cast("Scale", scale),
+        jpeg=jpeg,
+        scale_known=size is not None or "pixel_size_um" in changes,
+    )
     if not quiet:
         for path in files:
             print(path)
     return 0
+
+
+def _masks(path: Path, *, level: float | None, plane: int | None) -> tuple[Masks, float | None]:
+    """Masks of the cut, and the pixel size that the file states."""
+    from poroscan.intake.fields import read_field, section_of_field
+    from poroscan.render.reading import MASK_ENDINGS, cut, read_masks
+
+    masks = None
+    if level is None and path.suffix.lower() in MASK_ENDINGS:
+        masks = read_masks(path, plane=plane)
+    if masks is not None:
+        return masks, None
+    simulated = read_field(path)
+    try:
+        section = section_of_field(simulated, threshold=level)
+    except ValueError as error:
+        raise InputError(f"{path.name}: {error}") from None
+    return cut(path, section.pores, section.particle, plane=plane), simulated.pixel_size.um
 
 
 def _changes(pairs: list[str]) -> dict[str, str]:

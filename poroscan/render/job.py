@@ -56,6 +56,7 @@ def render_to(
     seed: int,
     scale: Scale = "ome",
     jpeg: bool = False,
+    scale_known: bool = True,
 ) -> tuple[Rendered, tuple[Path, ...]]:
     """Render masks and write picture, particle numbers, pores and truth table.
 
@@ -73,13 +74,23 @@ def render_to(
         How a TIFF says its pixel size.
     jpeg
         Write a JPEG (no scale in the header) in place of a TIFF.
+    scale_known
+        False where the pixel size of ``settings`` stands for nothing: no file then states one, nor a length in micrometres.
 
     Returns
     -------
     rendered : Rendered
     files : tuple of Path
         In the order picture, particles, pores, truth.
+
+    Raises
+    ------
+    SettingsError
+        If a scale bar is asked for and the scale is not known.
     """
+    if not scale_known and settings.bar != "none":
+        raise SettingsError("a scale bar needs a pixel size; give --pixel-size")
+    scale = scale if scale_known else "none"
     rendered = render_section(masks.pores, masks.particle, settings, rng=seed, depth=masks.depth)
     folder.mkdir(parents=True, exist_ok=True)
     picture = folder / f"{name}.{'jpg' if jpeg else 'tif'}"
@@ -88,12 +99,17 @@ def render_to(
     else:
         write_tiff(picture, rendered.grey, pixel_size_um=settings.pixel_size_um, scale=scale)
     table = folder / f"{name}_truth.csv"
-    _write_truth(table, rendered)
-    return rendered, (picture, *write_masks(folder, name, rendered), table)
+    _write_truth(table, rendered, lengths=scale_known)
+    mask_files = write_masks(folder, name, rendered, scale="ome" if scale_known else "none")
+    return rendered, (picture, *mask_files, table)
 
 
-def _write_truth(path: Path, rendered: Rendered) -> None:
-    columns = list(dict.fromkeys(key for row in rendered.truth.values() for key in row))
+def _write_truth(path: Path, rendered: Rendered, *, lengths: bool) -> None:
+    columns = [
+        key
+        for key in dict.fromkeys(key for row in rendered.truth.values() for key in row)
+        if lengths or not key.endswith("_um")
+    ]
     with path.open("w", encoding="utf-8", newline="") as file:
         writer = csv.writer(file, lineterminator="\n")
         writer.writerow(["particle", *columns])

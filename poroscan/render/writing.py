@@ -103,7 +103,7 @@ def write_png(path: Path, image: npt.NDArray[np.uint8]) -> None:
     Image.fromarray(image).save(path, format="PNG", optimize=True)
 
 
-def write_masks(folder: Path, name: str, rendered: Rendered) -> tuple[Path, Path]:
+def write_masks(folder: Path, name: str, rendered: Rendered, *, scale: Scale = "ome") -> tuple[Path, Path]:
     """Write the true masks of a picture: ``NAME_particles.tif`` (numbers) and ``NAME_pores.png`` (255 is pore).
 
     Parameters
@@ -112,6 +112,8 @@ def write_masks(folder: Path, name: str, rendered: Rendered) -> tuple[Path, Path
         Where, and the stem of the files.
     rendered
         Picture with its truth.
+    scale
+        How the file of numbers says its pixel size.
 
     Returns
     -------
@@ -119,6 +121,6 @@ def write_masks(folder: Path, name: str, rendered: Rendered) -> tuple[Path, Path
         The two files.
     """
     particles, pores = folder / f"{name}_particles.tif", folder / f"{name}_pores.png"
-    write_tiff(particles, rendered.labels.astype(np.uint16), pixel_size_um=rendered.pixel_size_um)
+    write_tiff(particles, rendered.labels.astype(np.uint16), pixel_size_um=rendered.pixel_size_um, scale=scale)
     write_png(pores, rendered.pores.astype(np.uint8) * 255)
     return particles, pores

@@ -58,12 +58,33 @@ def test_three_grey_picture_is_surroundings_polymer_pore(tmp_path: Path) -> None
     assert (masks.particle.sum(), masks.pores.sum()) == (100, 4)
 
 
-def test_two_valued_array_is_a_pore_mask_and_a_field_is_polymer_fraction(tmp_path: Path) -> None:
+def test_two_valued_array_is_a_pore_mask_and_a_field_is_none(tmp_path: Path) -> None:
     np.save(tmp_path / "two.npy", np.eye(4, dtype=bool))
     assert read_masks(tmp_path / "two.npy").pores.sum() == 4
     np.save(tmp_path / "field.npy", np.linspace(0, 1, 16).reshape(4, 4))
-    assert read_masks(tmp_path / "field.npy").pores.sum() == 8
-    assert read_masks(tmp_path / "field.npy", level=0.25).pores.sum() == 4
+    assert read_masks(tmp_path / "field.npy") is None
+
+
+def test_simulated_field_is_pictured_by_its_polymer_fraction(masks: Path, tmp_path: Path) -> None:
+    with np.load(masks) as given:
+        pores, particle = given["pores"], given["particle"]
+    rng = np.random.default_rng(0)
+    polymer = np.where(particle & ~pores, 0.8, 0.1) + 0.02 * rng.standard_normal(pores.shape)
+    np.savez(tmp_path / "sim.npz", polymer=polymer, spacing_um=0.25)
+    assert command(tmp_path / "sim.npz", tmp_path / "out", bar="burnt", quiet=True) == 0
+    found = np.asarray(Image.open(tmp_path / "out/sim_pores.png")) > 0
+    assert (found != pores).mean() < 0.01
+    with tifffile.TiffFile(tmp_path / "out/sim.tif") as file:
+        assert 'PhysicalSizeX="0.25"' in (file.ome_metadata or "")
+
+
+def test_no_length_is_invented(masks: Path, tmp_path: Path) -> None:
+    command(masks, tmp_path / "out", quiet=True)
+    with tifffile.TiffFile(tmp_path / "out/bead.tif") as file:
+        assert not file.is_ome
+    assert "_um" not in (tmp_path / "out/bead_truth.csv").read_text()
+    with pytest.raises(SettingsError, match="a scale bar needs a pixel size; give --pixel-size"):
+        command(masks, tmp_path / "out", bar="burnt", quiet=True)
 
 
 def test_volume_is_cut_and_gives_the_depth(tmp_path: Path) -> None:
@@ -106,8 +127,8 @@ def test_arrays_that_are_no_masks_are_refused(tmp_path: Path) -> None:
     np.savez(tmp_path / "s.npz", pores=np.zeros((3, 3), bool), particle=np.zeros((3, 4), bool))
     with pytest.raises(InputError, match=r"pores of shape \(3, 3\)"):
         read_masks(tmp_path / "s.npz")
-    np.savez(tmp_path / "t.npz", a=np.zeros((3, 3)), b=np.zeros((3, 3)))
-    with pytest.raises(InputError, match="holds arrays a, b; name them pores and particle"):
+    np.savez(tmp_path / "t.npz", pores=np.zeros((3, 3), bool), particle=np.zeros((3, 3)))
+    with pytest.raises(InputError, match="has a particle of float64 values; give a bool mask or particle numbers"):
         read_masks(tmp_path / "t.npz")
 
 
