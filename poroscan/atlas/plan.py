@@ -1,0 +1,100 @@
+"""Which formulations to simulate next: space-filling first, then where regimes and their borders are thinly covered.
+
+A cheap pilot on a small grid maps where the regimes lie. Each round then draws formulations for the regimes that still lack
+runs, with a chance that grows with the nearest neighbours' share of that regime, so that both its middle and its borders are
+covered. Everything follows from the seed and the runs made so far: an interrupted build goes on as if it had not
+stopped.
+"""
+
+from __future__ import annotations
+
+from collections import Counter
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+
+from poroscan.atlas.space import AXES, Space, shares_of, sobol
+from poroscan.demix.regime import REGIMES
+
+FloatArray = npt.NDArray[np.float64]
+
+_NEIGHBOURS = 10
+_CANDIDATES = 4096
+#: Candidates nearer to a chosen point than this (in shares of the ranges) are passed over.
+_APART = 0.12
+
+
+@dataclass(frozen=True)
+class Known:
+    """A formulation with its outcome: a regime, or a word that is none (``dissolved``)."""
+
+    parameters: Mapping[str, float]
+    outcome: str
+
+
+def deficits(known: Sequence[Known], *, per_regime: int) -> dict[str, int]:
+    """Runs that each regime still lacks."""
+    counts = Counter(k.outcome for k in known)
+    return {regime: max(0, per_regime - counts[regime]) for regime in REGIMES}
+
+
+def propose(
+    space: Space, pilot: Sequence[Known], runs: Sequence[Known], *, n: int, per_regime: int, seed: int
+) -> tuple[dict[str, float], ...]:
+    """Formulations of the next round.
+
+    Parameters
+    ----------
+    space
+        Axes and pinned values.
+    pilot, runs
+        What is known from the pilot and from the atlas itself.
+    n
+        Formulations wanted.
+    per_regime
+        Runs wanted of each regime; where none lacks any, points are drawn at the borders of all.
+    seed
+        Seed of this round.
+
+    Raises
+    ------
+    ValueError
+        If nothing is known yet.
+    """
+    if not (pilot or runs):
+        raise ValueError("propose needs a pilot or runs to learn from, but nothing is known yet")
+    rng = np.random.default_rng(seed)
+    candidates = sobol(_CANDIDATES, len(AXES), seed=seed)
+    chance = _regime_chances(candidates, [*pilot, *runs])
+    missing = deficits(runs, per_regime=per_regime)
+    want = np.array([missing[r] for r in REGIMES], dtype=float)
+    if want.sum() == 0:
+        chance = chance * (1 - chance)  # borders: most uncertain where shares are balanced
+        want = np.ones(len(REGIMES))
+    chosen: list[int] = []
+    free = np.ones(len(candidates), dtype=bool)
+    for regime in rng.choice(len(REGIMES), size=n, p=want / want.sum()):
+        weight = np.where(free, chance[:, regime] ** 2, 0.0)
+        weight = weight if weight.sum() > 0 else free.astype(float)
+        pick = int(rng.choice(len(candidates), p=weight / weight.sum()))
+        chosen.append(pick)
+        free &= np.linalg.norm(candidates - candidates[pick], axis=1) > _APART
+        free[pick] = False
+        if not free.any():
+            free = np.ones(len(candidates), dtype=bool)
+    return tuple(space.at(candidates[i]) for i in chosen)
+
+
+def _regime_chances(points: FloatArray, known: Sequence[Known]) -> FloatArray:
+    """Share of each regime among the nearest neighbours, shape (points, regimes)."""
+    from scipy.spatial import cKDTree
+
+    where = np.array([shares_of(k.parameters) for k in known])
+    labels = np.array([[k.outcome == r for r in REGIMES] for k in known], dtype=float)
+    k = min(_NEIGHBOURS, len(known))
+    distance, index = cKDTree(where).query(points, k=k)
+    distance, index = distance.reshape(len(points), k), index.reshape(len(points), k)
+    weight = 1 / (distance + 0.05)
+    return np.einsum("pk,pkr->pr", weight, labels[index]) / weight.sum(axis=1, keepdims=True)
