@@ -11,7 +11,7 @@ headers         pixel sizes written in headers; pixel_size: which source counts
 banner          the data banner; scale_bar, ocr: the scale bar and its label
 image_quality   clipping, noise, resolution, illumination, charging
 inspection      a folder looked over; contact_sheet: the same as a picture
-fields          simulated fields; vtk: one of their formats
+fields          simulated fields; field_readers, vtk: their formats; field_sections: from array to Section
 """
 
 from __future__ import annotations
@@ -30,6 +30,10 @@ _PUBLIC = {
     "FolderListing": "poroscan.intake.folders",
     "InputFile": "poroscan.intake.folders",
     "Problem": "poroscan.intake.folders",
+    "Field": "poroscan.intake.fields",
+    "read_field": "poroscan.intake.fields",
+    "section_of_field": "poroscan.intake.fields",
+    "section_of_array": "poroscan.intake.field_sections",
     "SidecarRow": "poroscan.intake.sidecar",
 }
 

@@ -122,7 +122,7 @@ def sheet_png(found: Inspected) -> bytes:
         else:
             draw.rectangle((left, top, left + THUMBNAIL, top + 60), outline="#a33a00", width=2)
             draw.text((left + 10, top + 20), "not readable", fill="#a33a00", font=font)
-        wrapped = [part for line in caption(row) for part in _wrapped(line, draw, font, THUMBNAIL + 30)]
+        wrapped = [part for line in caption(row) for part in _wrapped(line, draw, font, THUMBNAIL + 12)]
         y = top + (THUMBNAIL if row.thumbnail is not None else 60) + 6
         for number, line in enumerate(wrapped[: _CAPTION_LINES + 1]):
             draw.text((left, y + number * _LINE), line, fill="black" if number == 0 else "#444444", font=font)

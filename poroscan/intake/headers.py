@@ -108,6 +108,18 @@ def ome_candidate(xml: str) -> Candidate | None:
     return None
 
 
+def ome_spacing(xml: str) -> tuple[float, ...] | None:
+    """Micrometres along (z, y, x) of the first picture of an OME-XML text; (y, x) where no z is stated; None without any."""
+    root = _parsed(xml)
+    for element in root.iter() if root is not None else ():
+        if element.tag.rpartition("}")[2] == "Pixels":
+            sizes = [_ome_length(element, axis) for axis in "ZYX"]
+            if sizes[1] is None or sizes[2] is None:
+                return None
+            return tuple(s for s in sizes if s is not None)
+    return None
+
+
 def _ome_length(element: ElementTree.Element, axis: str) -> float | None:
     unit = UNIT_UM.get(element.get(f"PhysicalSize{axis}Unit", "µm").strip().lower())
     value = _number(element.get(f"PhysicalSize{axis}", ""))
