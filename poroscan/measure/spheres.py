@@ -1,0 +1,109 @@
+"""Sphere sizes of one section with their intervals: stereology applied to the table of pore bodies.
+
+Means are ratios of sums over the sections (``stereology``), so their intervals come from blocks like every other ratio; the median
+comes from unfolded linear classes and its interval from resampled blocks.
+"""
+
+from __future__ import annotations
+
+import math
+from types import MappingProxyType
+
+import numpy as np
+import numpy.typing as npt
+
+from poroscan.measure.stereology import Unfolded, kernel, linear_classes
+from poroscan.measure.uncertainty import LEAST_BLOCKS, block_ratio, estimate_of
+from poroscan.quantities import Estimate
+
+Float = npt.NDArray[np.float64]
+
+BASES = ("sphere_d50", "sphere_d32", "sphere_d43", "sphere_density")
+
+
+def estimates(
+    diameters: npt.ArrayLike,
+    block_of: npt.ArrayLike,
+    *,
+    block_area: npt.ArrayLike,
+    rng: np.random.Generator,
+    inflation: float = 1.0,
+    replicates: int = 400,
+) -> dict[str, Estimate]:
+    """Sphere D50 (by volume), D[3,2], D[4,3] and number per volume from section diameters.
+
+    Parameters
+    ----------
+    diameters
+        Diameters of the pore bodies in the section, pixels, positive; may be empty.
+    block_of
+        Block (1…n) of each body.
+    block_area
+        Area of each block 1…n, pixels.
+    rng
+        For the resampling of blocks.
+    inflation
+        Factor on variances for the correlation between blocks.
+    replicates
+        Number of resamples.
+
+    Raises
+    ------
+    ValueError
+        If lengths differ or a diameter is not positive.
+    """
+    d, block, area = np.asarray(diameters, float), np.asarray(block_of, np.int64), np.asarray(block_area, float)
+    if d.size == 0:
+        return {base: Estimate(math.nan) for base in BASES}
+    if block.shape != d.shape:
+        raise ValueError(f"block_of must have one entry per diameter ({d.size}), not shape {block.shape}")
+    n = area.size + 1
+    by = {k: np.bincount(block, d**k, n)[1:] for k in (-1, 1, 2, 3)}
+    d32 = block_ratio(3 * math.pi / 8 * by[2], by[1], inflation=inflation, scale="log")
+    d43 = block_ratio(32 / (9 * math.pi) * by[3], by[2], inflation=inflation, scale="log")
+    density = block_ratio(2 / math.pi * by[-1], area, inflation=inflation, scale="log")
+    return {
+        "sphere_d50": _median(d, block, area, rng, inflation, replicates),
+        "sphere_d32": estimate_of(d32),
+        "sphere_d43": estimate_of(d43),
+        "sphere_density": estimate_of(density),
+    }
+
+
+def _median(
+    d: Float, block: npt.NDArray[np.int64], area: Float, rng: np.random.Generator, inflation: float, replicates: int
+) -> Estimate:
+    whole = linear_classes(d, area=float(area.sum()))
+    value = whole.quantile(0.5)
+    used = np.unique(block[block > 0])
+    if not math.isfinite(value) or used.size < LEAST_BLOCKS:
+        return Estimate(value)
+    # Classes stay those of the whole section; what is drawn anew is how many sections of each block fall in each.
+    step = np.clip(np.searchsorted(whole.edges, d, side="right") - 1, 0, whole.diameter.size - 1)
+    row = np.searchsorted(used, block)
+    keep = (block > 0).astype(float)
+    row = np.minimum(row, used.size - 1)
+    counts = np.zeros((used.size, whole.diameter.size))
+    sums = np.zeros((used.size, 2))
+    np.add.at(counts, (row, step), keep)
+    np.add.at(sums, row, np.stack([d * keep, d**2 * keep], axis=1))
+    weights = rng.multinomial(used.size, np.full(used.size, 1 / used.size), size=replicates).astype(float)
+    inverse = np.linalg.inv(kernel(whole.edges))
+    drawn = [
+        _drawn_median(whole, inverse @ c, 3 * math.pi / 8 * s[1] / s[0])
+        for c, s in zip(weights @ counts, weights @ sums, strict=True)
+        if s[0] > 0
+    ]
+    spread = np.array([x for x in drawn if math.isfinite(x)])
+    if spread.size < 0.9 * replicates:
+        return Estimate(value)
+    widen = math.sqrt(inflation)
+    sd = float(np.std(np.log(spread))) * widen
+    low, high = (float(np.exp(widen * (np.log(q) - np.log(value)))) for q in np.quantile(spread, (0.025, 0.975)))
+    return Estimate(value, value * min(low, 1), value * max(high, 1), MappingProxyType({"sampling": value * sd}))
+
+
+def _drawn_median(whole: Unfolded, density: Float, sauter: float) -> float:
+    drawn = Unfolded(whole.edges, whole.edges[1:], density)
+    classes = drawn.mean(3, 2)
+    return drawn.quantile(0.5) * sauter / classes if math.isfinite(classes) else math.nan
