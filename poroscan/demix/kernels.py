@@ -26,19 +26,18 @@ def wrap(field):  # type: ignore[no-untyped-def]
 
 
 @njit(**_FAST)
-def potentials(p, n, par, off_rows, off_weights, e_p, e_n, slow, w_pn, w_ps, w_ns, buf):  # type: ignore[no-untyped-def]
-    """Cell values needed by the fluxes.
-
-    ``e_p``, ``e_n``: exchange potentials without their ideal part (interaction and gradient energy) of polymer and
-    non-solvent against solvent. ``slow``: square root of the arrest factor. ``w_ab``: fourth root of the exchange mobility
-    of the pair, so that the product over the two cells of a link is the root of the link's mobility.
+def potentials(p, n, par, off_rows, off_weights, cells, buf):  # type: ignore[no-untyped-def]
+    """Cell values needed by the fluxes, into ``cells``: exchange potentials without their ideal part (interaction and
+    gradient energy) of polymer and of non-solvent against solvent; square root of the arrest factor times the polymer's
+    mobility; square roots of the three fractions (0 where a fraction is negative).
     """
+    e_p, e_n, slow, q_p, q_n, q_s = cells
     rows, columns = p.shape[0], p.shape[1] - 2
     x_sn, x_pn, x_ps = par[0], par[1], par[2]
     k_p, k_n = par[6], par[7]
     m_p, g_frac, g_width, floor = par[8], par[9], par[10], par[11]
     one, zero = par.dtype.type(1), par.dtype.type(0)
-    tiny, top, shrink, half = par[12], par[13], par[14], par[15]
+    top, shrink, half = par[12], par[13], par[14]
     for r in range(rows):
         for j in range(1, columns + 1):
             buf[0, j] = zero
@@ -55,7 +54,7 @@ def potentials(p, n, par, off_rows, off_weights, e_p, e_n, slow, w_pn, w_ps, w_n
             e_s = x_ps * vp + x_sn * vn
             e_p[r, j] = x_pn * vn + x_ps * vs - k_p * buf[0, j] - e_s
             e_n[r, j] = x_pn * vp + x_sn * vs - k_n * buf[1, j] - e_s
-            # logistic fall: exp(y) by six squarings of its second-order start at y/64 (within 1 % for |y| < 14)
+            # logistic fall: exp(y) by six squarings of its second-order start at y/64 (within 12 % at |y| = 14, 1 % at 6)
             y = (vp - g_frac) * g_width
             y = min(max(y, -top), top) * shrink
             x = one + y * (one + half * y)
@@ -65,15 +64,11 @@ def potentials(p, n, par, off_rows, off_weights, e_p, e_n, slow, w_pn, w_ps, w_n
             x *= x
             x *= x
             x *= x
-            arrest = floor + (one - floor) / (one + x)
-            slow[r, j] = np.sqrt(arrest)
-            vp = max(vp, tiny)
-            vn = max(vn, tiny)
-            vs = max(vs, tiny)
-            w_pn[r, j] = np.sqrt(np.sqrt(m_p * arrest * vp * vn))
-            w_ps[r, j] = np.sqrt(np.sqrt(m_p * arrest * vp * vs))
-            w_ns[r, j] = np.sqrt(np.sqrt(vn * vs))
-    for a in (e_p, e_n, slow, w_pn, w_ps, w_ns):
+            slow[r, j] = np.sqrt(m_p * (floor + (one - floor) / (one + x)))
+            q_p[r, j] = np.sqrt(max(vp, zero))
+            q_n[r, j] = np.sqrt(max(vn, zero))
+            q_s[r, j] = np.sqrt(max(vs, zero))
+    for a in cells:
         for r in range(rows):
             a[r, 0] = a[r, columns]
             a[r, columns + 1] = a[r, 1]
@@ -103,107 +98,123 @@ def _link(
     i_p,
     i_s,
     i_n,
-    m_p,
-    one,
     weight,
+    c,
     f_p,
     f_n,
 ):  # type: ignore[no-untyped-def]
+    """Flux of polymer and non-solvent over one kind of link for one row: the formulas are in docs/simulation.md.
+
+    The mean fraction of a link is 6g(3g + t)/(28g + t) with g = √(φφ'), t = φ + φ': the logarithmic mean to sixth order, and 0
+    where either fraction is 0. With it the difference of fractions is mean × difference of logarithms, and no logarithm
+    is needed.
+    """
+    one, tiny, three, six, many = c
     for j in range(f_p.size):
         s0, s1 = one - p0[j] - n0[j], one - p1[j] - n1[j]
         dp, dn, ds = (p1[j] - p0[j]) * i_p, (n1[j] - n0[j]) * i_n, (s1 - s0) * i_s
-        tp, tn, ts = p0[j] + p1[j], n0[j] + n1[j], s0 + s1
+        g, t = x0[j] * x1[j], p0[j] + p1[j]
+        l_p = six * g * (three * g + t) / max(many * g + t, tiny)
+        g, t = y0[j] * y1[j], n0[j] + n1[j]
+        l_n = six * g * (three * g + t) / max(many * g + t, tiny)
+        g, t = z0[j] * z1[j], s0 + s1
+        l_s = six * g * (three * g + t) / max(many * g + t, tiny)
         de_p, de_n = ep1[j] - ep0[j], en1[j] - en0[j]
-        a = m_p * a0[j] * a1[j]
-        v_pn, v_ps, v_ns = x0[j] * x1[j], y0[j] * y1[j], z0[j] * z1[j]
-        g_pn = a * (tn * dp - tp * dn) + v_pn * (v_pn * (de_p - de_n) - r_x[j])
-        g_ps = a * (ts * dp - tp * ds) + v_ps * (v_ps * de_p - r_y[j])
-        g_ns = ts * dn - tn * ds + v_ns * (v_ns * de_n - r_z[j])
+        a = a0[j] * a1[j]
+        m_pn, m_ps, m_ns = l_p * l_n, l_p * l_s, l_n * l_s
+        g_pn = a * (l_n * dp - l_p * dn + m_pn * (de_p - de_n)) - np.sqrt(a * m_pn) * r_x[j]
+        g_ps = a * (l_s * dp - l_p * ds + m_ps * de_p) - np.sqrt(a * m_ps) * r_y[j]
+        g_ns = l_s * dn - l_n * ds + m_ns * de_n - np.sqrt(m_ns) * r_z[j]
         f_p[j] = weight * (g_pn + g_ps)
         f_n[j] = weight * (g_ns - g_pn)
 
 
 @njit(**_FAST)
-def rates(p, n, e_p, e_n, slow, w_pn, w_ps, w_ns, par, links, shifts, weights, noise, key0, key1, out_p, out_n, buf):  # type: ignore[no-untyped-def]
+def _link_still(p0, p1, n0, n1, ep0, ep1, en0, en1, a0, a1, x0, x1, y0, y1, z0, z1, i_p, i_s, i_n, weight, c, f_p, f_n):  # type: ignore[no-untyped-def]
+    """The same without thermal flux."""
+    one, tiny, three, six, many = c
+    for j in range(f_p.size):
+        s0, s1 = one - p0[j] - n0[j], one - p1[j] - n1[j]
+        dp, dn, ds = (p1[j] - p0[j]) * i_p, (n1[j] - n0[j]) * i_n, (s1 - s0) * i_s
+        g, t = x0[j] * x1[j], p0[j] + p1[j]
+        l_p = six * g * (three * g + t) / max(many * g + t, tiny)
+        g, t = y0[j] * y1[j], n0[j] + n1[j]
+        l_n = six * g * (three * g + t) / max(many * g + t, tiny)
+        g, t = z0[j] * z1[j], s0 + s1
+        l_s = six * g * (three * g + t) / max(many * g + t, tiny)
+        de_p, de_n = ep1[j] - ep0[j], en1[j] - en0[j]
+        a = a0[j] * a1[j]
+        g_pn = a * (l_n * dp - l_p * dn + l_p * l_n * (de_p - de_n))
+        g_ps = a * (l_s * dp - l_p * ds + l_p * l_s * de_p)
+        g_ns = l_s * dn - l_n * ds + l_n * l_s * de_n
+        f_p[j] = weight * (g_pn + g_ps)
+        f_n[j] = weight * (g_ns - g_pn)
+
+
+@njit(**_FAST)
+def _random(base, key0, key1, amp, middle, x, y, z):  # type: ignore[no-untyped-def]
+    """Three uniform numbers of standard deviation ``amp``·(1/unit) from one hashed counter for each column."""
+    c1, c2, c3 = np.uint32(0x9E3779B9), np.uint32(0x85EBCA6B), np.uint32(0xC2B2AE35)
+    mask = np.uint32(1023)
+    for j in range(x.size):
+        h = np.uint32(np.uint32(np.uint32(base + np.uint32(j)) * c1) ^ key0)
+        h = np.uint32(np.uint32(h ^ np.uint32(h >> np.uint32(16))) * c2)
+        h = np.uint32(h + key1)
+        h = np.uint32(np.uint32(h ^ np.uint32(h >> np.uint32(13))) * c3)
+        h = np.uint32(h ^ np.uint32(h >> np.uint32(16)))
+        x[j] = amp * (np.float32(np.int32(h & mask)) - middle)
+        y[j] = amp * (np.float32(np.int32(np.uint32(h >> np.uint32(10)) & mask)) - middle)
+        z[j] = amp * (np.float32(np.int32(np.uint32(h >> np.uint32(20)) & mask)) - middle)
+
+
+@njit(**_FAST)
+def rates(p, n, cells, par, links, shifts, weights, noise, key0, key1, out_p, out_n, buf):  # type: ignore[no-untyped-def]
     """Divergence of the fluxes (deterministic and thermal) over all links; every link is visited once.
 
     ``links[l, r]``: the row that row r meets over link l; ``shifts[l]``: its shift in columns; ``weights[l]``: weight of the link.
     ``noise`` is sqrt(2·strength/dt); 0 leaves the random numbers out.
     """
+    e_p, e_n, slow, q_p, q_n, q_s = cells
     rows, columns = p.shape[0], p.shape[1] - 2
-    half = par[15]
-    i_p, i_s, i_n = par[3] * half, par[4] * half, par[5] * half
-    m_p = par[8]
+    i_p, i_s, i_n = par[3], par[4], par[5]
     one, zero = par.dtype.type(1), par.dtype.type(0)
-    middle, unit = par[16], par[17]
-    c1, c2, c3 = np.uint32(0x9E3779B9), np.uint32(0x85EBCA6B), np.uint32(0xC2B2AE35)
-    mask = np.uint32(1023)
+    c = (one, par[17], par[18], par[19], par[20])
+    middle, unit = par[15], par[16]
     for r in range(rows):
         for j in range(columns + 2):
             out_p[r, j] = zero
             out_n[r, j] = zero
+    f_p, f_n = buf[0, 1:-1], buf[1, 1:-1]
+    x, y, z = buf[2, 1:-1], buf[3, 1:-1], buf[4, 1:-1]
     for r in range(rows):
         for k in range(links.shape[0]):
             q, s, weight = links[k, r], shifts[k], weights[k]
-            amp = noise / np.sqrt(weight) * unit
-            base = np.uint32((r * links.shape[0] + k) * columns)
-            if noise > zero:
-                for j in range(1, columns + 1):
-                    h = np.uint32(np.uint32(np.uint32(base + np.uint32(j)) * c1) ^ key0)
-                    h = np.uint32(np.uint32(h ^ np.uint32(h >> np.uint32(16))) * c2)
-                    h = np.uint32(h + key1)
-                    h = np.uint32(np.uint32(h ^ np.uint32(h >> np.uint32(13))) * c3)
-                    h = np.uint32(h ^ np.uint32(h >> np.uint32(16)))
-                    buf[2, j] = amp * (np.float32(np.int32(h & mask)) - middle)
-                    buf[3, j] = amp * (np.float32(np.int32(np.uint32(h >> np.uint32(10)) & mask)) - middle)
-                    buf[4, j] = amp * (np.float32(np.int32(np.uint32(h >> np.uint32(20)) & mask)) - middle)
-            else:
-                for j in range(1, columns + 1):
-                    buf[2, j] = zero
-                    buf[3, j] = zero
-                    buf[4, j] = zero
             lo, hi = 1 + s, columns + 1 + s
-            _link(
-                p[r, 1:-1],
-                p[q, lo:hi],
-                n[r, 1:-1],
-                n[q, lo:hi],
-                e_p[r, 1:-1],
-                e_p[q, lo:hi],
-                e_n[r, 1:-1],
-                e_n[q, lo:hi],
-                slow[r, 1:-1],
-                slow[q, lo:hi],
-                w_pn[r, 1:-1],
-                w_pn[q, lo:hi],
-                w_ps[r, 1:-1],
-                w_ps[q, lo:hi],
-                w_ns[r, 1:-1],
-                w_ns[q, lo:hi],
-                buf[2, 1:-1],
-                buf[3, 1:-1],
-                buf[4, 1:-1],
-                i_p,
-                i_s,
-                i_n,
-                m_p,
-                one,
-                weight,
-                buf[0, 1:-1],
-                buf[1, 1:-1],
-            )
-            to_p, to_n = out_p[q, lo:hi], out_n[q, lo:hi]
+            if noise > zero:
+                base = np.uint32((r * links.shape[0] + k) * columns)
+                _random(base, key0, key1, noise / np.sqrt(weight) * unit, middle, x, y, z)
+                _link(
+                    p[r, 1:-1], p[q, lo:hi], n[r, 1:-1], n[q, lo:hi], e_p[r, 1:-1], e_p[q, lo:hi], e_n[r, 1:-1],
+                    e_n[q, lo:hi], slow[r, 1:-1], slow[q, lo:hi], q_p[r, 1:-1], q_p[q, lo:hi], q_n[r, 1:-1], q_n[q, lo:hi],
+                    q_s[r, 1:-1], q_s[q, lo:hi], x, y, z, i_p, i_s, i_n, weight, c, f_p, f_n,
+                )  # fmt: skip
+            else:
+                _link_still(
+                    p[r, 1:-1], p[q, lo:hi], n[r, 1:-1], n[q, lo:hi], e_p[r, 1:-1], e_p[q, lo:hi], e_n[r, 1:-1],
+                    e_n[q, lo:hi], slow[r, 1:-1], slow[q, lo:hi], q_p[r, 1:-1], q_p[q, lo:hi], q_n[r, 1:-1], q_n[q, lo:hi],
+                    q_s[r, 1:-1], q_s[q, lo:hi], i_p, i_s, i_n, weight, c, f_p, f_n,
+                )  # fmt: skip
+            here_p, here_n, there_p, there_n = out_p[r, 1:-1], out_n[r, 1:-1], out_p[q, lo:hi], out_n[q, lo:hi]
             for j in range(columns):
-                out_p[r, j + 1] += buf[0, j + 1]
-                out_n[r, j + 1] += buf[1, j + 1]
+                here_p[j] += f_p[j]
+                here_n[j] += f_n[j]
             for j in range(columns):
-                to_p[j] -= buf[0, j + 1]
-                to_n[j] -= buf[1, j + 1]
-    for r in range(rows):
-        out_p[r, 1] += out_p[r, columns + 1]
-        out_p[r, columns] += out_p[r, 0]
-        out_n[r, 1] += out_n[r, columns + 1]
-        out_n[r, columns] += out_n[r, 0]
+                there_p[j] -= f_p[j]
+                there_n[j] -= f_n[j]
+    for out in (out_p, out_n):
+        for r in range(rows):
+            out[r, 1] += out[r, columns + 1]
+            out[r, columns] += out[r, 0]
 
 
 @njit(**_FAST)
@@ -215,16 +226,3 @@ def advance(field, change):  # type: ignore[no-untyped-def]
             field[r, j + 1] += change[r, j]
         field[r, 0] = field[r, columns]
         field[r, columns + 1] = field[r, 1]
-
-
-@njit(**_FAST)
-def largest(change):  # type: ignore[no-untyped-def]
-    """Largest magnitude in ``change`` (rows, columns); NaN or infinite where any cell is."""
-    top = change.dtype.type(0)
-    total = change.dtype.type(0)
-    for r in range(change.shape[0]):
-        for j in range(change.shape[1]):
-            d = abs(change[r, j])
-            top = max(top, d)
-            total += d * change.dtype.type(0)
-    return top + total
