@@ -74,7 +74,7 @@ def command(
 
 def _masks(path: Path, *, level: float | None, plane: int | None) -> tuple[Masks, float | None]:
     """Masks of the cut, and the pixel size that the file states."""
-    from poroscan.intake.fields import read_field, section_of_field
+    from poroscan.intake import read_field, section_of_field
     from poroscan.render.reading import MASK_ENDINGS, cut, read_masks
 
     masks = None

@@ -1,6 +1,6 @@
 """SEM-like pictures of fields, with their true masks.
 
-outlines: particle outlines · structures: random pore structures · radial: skins, gradients, fingers · bodies: whole invented
+outlines: particle outlines · structures, volumes: random pore structures in two and three dimensions · radial: skins, gradients, fingers · bodies: whole invented
 particles · scene: several particles in one picture · depth: what lies under the cut face · specimen: signal of the
 specimen · instrument: what the microscope does to it · lettering: bar and banner · settings: the look · sem: all of it
 in one call · writing: files · samples: the sample pictures.

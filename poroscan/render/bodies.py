@@ -5,11 +5,13 @@ from __future__ import annotations
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
 from types import MappingProxyType
+from typing import NamedTuple
 
 import numpy as np
 from edt import edt
 
-from poroscan.render import radial, structures
+from poroscan.render import radial, structures, volumes
+from poroscan.render.depth import FloatImage, depth_below
 from poroscan.render.outlines import Outline, irregular
 from poroscan.section import BoolArray
 
@@ -25,11 +27,14 @@ class Body:
     known
         What is known by construction, in pixels: ``skin_thickness_px`` (nominal), ``pore_d50_px`` (area-weighted median
         diameter of closed cells), ``polar_design_deg`` (direction of a dipole), ``porosity_expected``.
+    depth
+        Depth of the material under each pore pixel, px, where the structure has one; else None.
     """
 
     particle: BoolArray
     pores: BoolArray
     known: Mapping[str, float] = field(default_factory=lambda: MappingProxyType({}))
+    depth: FloatImage | None = None
 
 
 @dataclass(frozen=True)
@@ -52,11 +57,16 @@ class Place:
         return self.outline
 
 
-Filled = tuple[BoolArray, dict[str, float]]
+class Filled(NamedTuple):
+    """Pores of the whole field, what is known of them, and their depth where it is not to be imagined."""
+
+    pores: BoolArray
+    known: dict[str, float]
+    depth: FloatImage | None = None
 
 
 def _dense(place: Place) -> Filled:
-    return np.zeros(place.shape, dtype=bool), {"porosity_expected": 0.0}
+    return Filled(np.zeros(place.shape, dtype=bool), {"porosity_expected": 0.0})
 
 
 def _cells(
@@ -87,7 +97,7 @@ def _cells(
         cells = cells[depth[at[:, 0], at[:, 1]] - cells[:, 2] >= max(place.skin, 2.0)]
     if len(cells):
         known["pore_d50_px"] = _area_median(2 * cells[:, 2])
-    return structures.paint_discs(place.shape, centres=cells[:, :2], radii=cells[:, 2]), known
+    return Filled(structures.paint_discs(place.shape, centres=cells[:, :2], radii=cells[:, 2]), known)
 
 
 def _area_median(diameters: structures.FloatImage) -> float:
@@ -98,12 +108,12 @@ def _area_median(diameters: structures.FloatImage) -> float:
 
 def _sponge(place: Place, *, porosity: float = 0.5, spacing: float = 22.0) -> Filled:
     pores = structures.spinodal(place.shape, porosity=porosity, spacing=spacing, rng=place.rng)
-    return pores, {"porosity_expected": porosity}
+    return Filled(pores, {"porosity_expected": porosity})
 
 
 def _cut(place: Place, *, porosity: float = 0.4, correlation: float = 12.0) -> Filled:
     pores = structures.level_cut(place.shape, porosity=porosity, correlation=correlation, rng=place.rng)
-    return pores, {"porosity_expected": porosity}
+    return Filled(pores, {"porosity_expected": porosity})
 
 
 def _polar(
@@ -117,36 +127,37 @@ def _polar(
     outline = place.need_outline("polar")
     chance = radial.dipole(outline, shape=place.shape, mean=porosity, amplitude=amplitude, direction_deg=direction_deg)
     pores = structures.level_cut(place.shape, porosity=chance, correlation=correlation, rng=place.rng)
-    return pores, {"porosity_expected": porosity, "polar_design_deg": direction_deg}
+    return Filled(pores, {"porosity_expected": porosity, "polar_design_deg": direction_deg})
 
 
 def _graded(place: Place, *, centre: float = 0.6, rim: float = 0.2, spacing: float = 20.0) -> Filled:
     outline = place.need_outline("graded")
     chance = radial.ramp(outline, shape=place.shape, centre=centre, rim=rim)
     pores = structures.spinodal(place.shape, porosity=chance, spacing=spacing, rng=place.rng)
-    return pores, {"porosity_expected": centre + 2 * (rim - centre) / 3}
+    return Filled(pores, {"porosity_expected": centre + 2 * (rim - centre) / 3})
 
 
 def _discs(place: Place, *, porosity: float = 0.35, pore_radius: float = 9.0) -> Filled:
     pores = structures.boolean_discs(place.shape, porosity=porosity, radius=pore_radius, rng=place.rng)
-    return pores, {"porosity_expected": porosity}
+    return Filled(pores, {"porosity_expected": porosity})
 
 
 def _spheres(place: Place, *, porosity: float = 0.35, pore_radius: float = 12.0) -> Filled:
     pores = structures.boolean_spheres(place.shape, porosity=porosity, radius=pore_radius, rng=place.rng)
-    return pores, {"porosity_expected": porosity}
+    return Filled(pores, {"porosity_expected": porosity})
 
 
 def _foam(
     place: Place, *, cell: float = 26.0, wall: float = 5.0, regularity: float = 0.75, rounding: float = 1.5
 ) -> Filled:
-    return structures.voronoi_foam(
+    foam = structures.voronoi_foam(
         place.shape, cell=cell, wall=wall, regularity=regularity, rounding=rounding, rng=place.rng
-    ), {}
+    )
+    return Filled(foam, {})
 
 
 def _beads(place: Place, *, bead: float = 24.0, overlap: float = 0.06, jitter: float = 0.22) -> Filled:
-    return structures.bead_packing(place.shape, bead=bead, overlap=overlap, jitter=jitter, rng=place.rng), {}
+    return Filled(structures.bead_packing(place.shape, bead=bead, overlap=overlap, jitter=jitter, rng=place.rng), {})
 
 
 def _fingers(
@@ -168,7 +179,21 @@ def _fingers(
         distance, theta = outline.polar(place.shape)
         inner = distance < outline.reach(theta) - skin - outline.radius * length * 1.2
         pores |= inner & structures.spinodal(place.shape, porosity=core, spacing=spacing, rng=place.rng)
-    return pores, {}
+    return Filled(pores, {})
+
+
+def _sponge_3d(place: Place, *, porosity: float = 0.45, correlation: float = 12.0) -> Filled:
+    """Cut face of a level-cut volume: what is seen in the pores is what lies below."""
+    shape = (int(np.ceil(4 * correlation)), *place.shape)
+    volume = volumes.level_cut_volume(shape, porosity=porosity, correlation=correlation, rng=place.rng)
+    return Filled(volume[0], {"porosity_expected": porosity}, depth_below(volume, plane=0))
+
+
+def _spheres_3d(place: Place, *, porosity: float = 0.4, pore_radius: float = 12.0) -> Filled:
+    """Cut face of a volume of overlapping round pores."""
+    shape = (int(np.ceil(3 * pore_radius)), *place.shape)
+    volume = volumes.boolean_spheres_volume(shape, porosity=porosity, radius=pore_radius, rng=place.rng)
+    return Filled(volume[0], {"porosity_expected": porosity}, depth_below(volume, plane=0))
 
 
 #: Named structures; each takes a Place and its own keywords.
@@ -185,6 +210,8 @@ STRUCTURES: Mapping[str, Callable[..., Filled]] = MappingProxyType(
         "foam": _foam,
         "beads": _beads,
         "fingers": _fingers,
+        "sponge_3d": _sponge_3d,
+        "spheres_3d": _spheres_3d,
     }
 )
 
@@ -225,13 +252,13 @@ def fill(
     if structure not in STRUCTURES:
         raise ValueError(f"unknown structure {structure!r}; known: {', '.join(STRUCTURES)}")
     place = Place(shape, outline, skin, np.random.default_rng(rng))
-    pores, known = STRUCTURES[structure](place, **options)
+    pores, known, depth = STRUCTURES[structure](place, **options)
     particle = place.particle()
     pores = pores & particle
     if skin > 0 and outline is not None:
         pores = radial.with_skin(pores, particle=particle, thickness=skin)
         known["skin_thickness_px"] = skin
-    return Body(particle, pores, known)
+    return Body(particle, pores, known, None if depth is None else np.where(pores, depth, 0.0))
 
 
 def make_body(

@@ -251,7 +251,7 @@ def draw_sample(sample: Sample) -> Rendered:
     scene = sample.scene(rng)
     name, changes = sample.looks
     settings = look(name, pixel_size_um=sample.pixel_size_um, **changes)
-    return render_section(scene.pores, scene.labels, settings, rng=rng, known=scene.known)
+    return render_section(scene.pores, scene.labels, settings, rng=rng, known=scene.known, depth=scene.depth)
 
 
 def write_sample(out: Path, sample: Sample) -> Rendered:

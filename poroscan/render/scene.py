@@ -24,11 +24,14 @@ class Scene:
         bool, of the same shape.
     known
         What is known of each particle by construction, by number.
+    depth
+        Depth of the material under each pore pixel, px; NaN where it is to be imagined. None imagines all of it.
     """
 
     labels: npt.NDArray[np.int32]
     pores: BoolArray
     known: Mapping[int, Mapping[str, float]]
+    depth: npt.NDArray[np.float64] | None = None
 
 
 def compose(shape: tuple[int, int], bodies: Sequence[Body], *, centres: Sequence[tuple[float, float]]) -> Scene:
@@ -57,6 +60,7 @@ def compose(shape: tuple[int, int], bodies: Sequence[Body], *, centres: Sequence
         raise ValueError(f"centres must hold one place per body ({len(bodies)}), not {len(centres)}")
     labels = np.zeros(shape, dtype=np.int32)
     pores = np.zeros(shape, dtype=bool)
+    depth = np.full(shape, np.nan)
     for number, (body, centre) in enumerate(zip(bodies, centres, strict=True), start=1):
         target, source = _overlap(shape, body.particle.shape, centre)
         if target is None or source is None:
@@ -64,7 +68,9 @@ def compose(shape: tuple[int, int], bodies: Sequence[Body], *, centres: Sequence
         free = body.particle[source] & (labels[target] == 0)
         labels[target][free] = number
         pores[target][free] = body.pores[source][free]
-    return Scene(labels, pores, {n: body.known for n, body in enumerate(bodies, start=1)})
+        if body.depth is not None:
+            depth[target][free] = body.depth[source][free]
+    return Scene(labels, pores, {n: body.known for n, body in enumerate(bodies, start=1)}, depth)
 
 
 _Window = tuple[slice, slice]

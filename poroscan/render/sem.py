@@ -70,7 +70,8 @@ def render_section(
     rng
         Generator or seed; the same seed gives the same picture.
     depth
-        Depth of the material under each pixel, px, for example from ``depth.depth_below``; None imagines one.
+        Depth of the material under each pixel, px, for example from ``depth.depth_below``; NaN pixels, or all of them
+        where it is None, get an imagined one.
     known
         What is known beyond the masks, by particle number, passed through to ``truth``.
 
@@ -87,9 +88,9 @@ def render_section(
     labels = _as_labels(particle)
     _check(pores, labels, depth)
     rng = np.random.default_rng(rng)
-    if depth is None:
-        depth = imagined_depth(pores, rng=rng, particle=labels > 0, struts=settings.struts)
-    signal = brightness(labels, pores, np.asarray(depth, dtype=float), settings=settings, rng=rng)
+    imagined = imagined_depth(pores, rng=rng, particle=labels > 0, struts=settings.struts)
+    below = imagined if depth is None else np.where(np.isnan(depth), imagined, np.asarray(depth, dtype=float))
+    signal = brightness(labels, pores, below, settings=settings, rng=rng)
     grey = expose(signal, settings=settings, rng=rng)
     rows = grey.shape[0]
     if settings.bar == "burnt":

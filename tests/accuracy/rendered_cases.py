@@ -31,6 +31,9 @@ STRUCTURES: tuple[tuple[str, float, dict[str, float]], ...] = (
     ("closed_cells", 5.0, {"diameter": 18.0, "porosity": 0.5, "amplitude": 0.7}),
     ("sponge", 10.0, {"spacing": 28.0, "porosity": 0.65}),
     ("dense", 0.0, {}),
+    ("sponge_3d", 6.0, {"correlation": 12.0, "porosity": 0.45}),
+    ("spheres_3d", 0.0, {"pore_radius": 12.0, "porosity": 0.35}),
+    ("closed_cells", 10.0, {"diameter": 30.0, "porosity": 0.55, "spread": 1.15}),
 )
 
 CASE_LOOKS = ("secondary", "ion_polished", "secondary", "backscatter", "secondary")
@@ -56,7 +59,7 @@ def draw_case(index: int, *, particles: int = 3) -> Case:
         names.append(structure)
     settings = draw_settings(CASE_LOOKS[index % len(CASE_LOOKS)], rng)
     scene = compose(SHAPE, bodies, centres=scatter(SHAPE, bodies, rng=rng, gap=14.0))
-    rendered = render_section(scene.pores, scene.labels, settings, rng=rng, known=scene.known)
+    rendered = render_section(scene.pores, scene.labels, settings, rng=rng, known=scene.known, depth=scene.depth)
     return Case(f"case_{index:03d}", tuple(names), settings, rendered)
 
 
