@@ -22,6 +22,7 @@ _TOLERANCE = (1.5 / 255, 14.0 / 255)
 _MIN_LETTERS = 4
 _FLAT = 0.45  # share of flat pixels in a row of dense text
 _QUIET = 0.75  # share of flat pixels in the first rows of a banner
+_EQUAL = 0.45  # share of neighbours in a row that are equal; noise leaves far fewer
 _MAX_GAP = 6  # rows with few flat pixels that may interrupt a banner (rules, thick lines, JPEG rings)
 
 
@@ -37,11 +38,14 @@ class Strip:
         How far a flat pixel may lie from its level.
     flat
         Share of flat pixels in every row of the picture.
+    ground
+        Share of pixels of the background's level in every row.
     """
 
     levels: tuple[float, ...]
     tolerance: float
     flat: npt.NDArray[np.float64]
+    ground: npt.NDArray[np.float64]
 
 
 def stretched(grey: npt.NDArray) -> npt.NDArray[np.float32]:
@@ -82,10 +86,11 @@ def _strip(bottom: npt.NDArray[np.float32]) -> Strip:
     levels = [background]
     if rest.size > 0.02 * _MIN_ROWS * bottom.shape[1]:
         levels.append(_level(rest)[0])
-    near = np.zeros(bottom.shape, dtype=bool)
-    for level in levels:
+    near = np.abs(bottom - background) <= tolerance
+    ground = near.mean(axis=1)
+    for level in levels[1:]:
         near |= np.abs(bottom - level) <= tolerance
-    return Strip(tuple(levels), tolerance, near.mean(axis=1))
+    return Strip(tuple(levels), tolerance, near.mean(axis=1), ground)
 
 
 def _level(values: npt.NDArray[np.float32]) -> tuple[float, float]:
@@ -116,15 +121,19 @@ def _flat_from(flat: npt.NDArray[np.float64]) -> int:
 
 def _edges(bottom: npt.NDArray[np.float32], strip: Strip, start: int) -> list[int]:
     """Rows at which a banner may begin, from the top: a quiet row under rows that are not flat, or a line."""
-    flat = strip.flat
+    last = len(strip.flat) - _MIN_ROWS
     edges = []
-    for row in range(max(1, start), len(flat) - _MIN_ROWS + 1):
-        above = float(np.median(flat[max(0, row - 4) : row]))
-        quiet = float(np.median(flat[row : row + 4]))
-        jump = quiet >= _QUIET and flat[row] >= 0.5 and above <= quiet - 0.35
-        if (jump and flat[row - 1] < flat[row] - 0.2) or _is_line(bottom, strip, row):
+    for row in range(max(1, start - _MAX_GAP), last + 1):
+        if _jumps(strip.flat, row) or _jumps(strip.ground, row) or _is_line(bottom, strip, row):
             edges.append(row)
     return edges
+
+
+def _jumps(share: npt.NDArray[np.float64], row: int) -> bool:
+    """Few flat pixels in the rows above, many from this row on."""
+    above = float(np.median(share[max(0, row - 4) : row]))
+    quiet = float(np.median(share[row : row + 4]))
+    return quiet >= _QUIET and share[row] >= 0.5 and above <= quiet - 0.35 and share[row - 1] < share[row] - 0.2
 
 
 def _is_line(bottom: npt.NDArray[np.float32], strip: Strip, row: int) -> bool:
@@ -141,7 +150,8 @@ def _is_banner(strip_values: npt.NDArray[np.float32], strip: Strip, *, closed: b
     rows = strip_values.shape[0]
     background = strip.levels[0]
     contrast = float(np.abs(strip_values - background).max())
-    if contrast < 0.15 or float(np.median(strip.flat[-rows:])) < _FLAT:
+    equal = float(np.mean(np.abs(np.diff(strip_values, axis=1)) < 0.5 / 255))
+    if contrast < 0.15 or float(np.median(strip.flat[-rows:])) < _FLAT or equal < _EQUAL:
         return False
     boxes = ink_boxes(np.abs(strip_values - background) > 0.5 * contrast)
     if longest_line(letters(boxes, rows=rows)) >= _MIN_LETTERS:
@@ -164,7 +174,7 @@ def _banner_without_edge(bottom: npt.NDArray[np.float32], strip: Strip, start: i
     contrast = float(np.abs(values - strip.levels[0]).max())
     boxes = ink_boxes(np.abs(values - strip.levels[0]) > 0.5 * contrast) if contrast >= 0.3 else []
     text = letters(boxes, rows=values.shape[0])
-    if longest_line(text) < 2 * _MIN_LETTERS or len(text) < 0.6 * len(boxes):
+    if longest_line(text) < _MIN_LETTERS or len(text) < max(2 * _MIN_LETTERS, 0.5 * len(boxes)):
         return 0
     margin = values.shape[0] - max(b.bottom for b in text)
     top = max(0, min(b.top for b in text) - max(margin, 2))

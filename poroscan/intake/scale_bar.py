@@ -24,6 +24,10 @@ _MOST_THICKNESS = 0.25  # of the bar's length
 _SHARES = (0.5, 0.75, 0.3)  # of the strip's contrast at which strokes are cut out
 
 
+#: How far the grey of letters may lie from the bar's; the strict values part letters from a textured ground.
+_LETTER_TOLERANCES = (0.35, 0.2, 0.1)
+
+
 @dataclass(frozen=True)
 class ScaleBar:
     """One stroke that may be the scale bar.
@@ -103,7 +107,7 @@ def _distinct(bars: list[ScaleBar]) -> list[ScaleBar]:
 
 def _overlap(a: Box, b: Box) -> bool:
     rows = min(a.bottom, b.bottom) - max(a.top, b.top)
-    return rows > -3 and min(a.right, b.right) - max(a.left, b.left) > 0.5 * min(a.width, b.width)
+    return rows > 0 and min(a.right, b.right) - max(a.left, b.left) > 0.5 * min(a.width, b.width)
 
 
 def _on_strip(strip: npt.NDArray[np.float32]) -> list[ScaleBar]:
@@ -130,7 +134,7 @@ def _in_picture(values: npt.NDArray[np.float32]) -> list[ScaleBar]:
 def _bars(values: npt.NDArray[np.float32], ink: npt.NDArray[np.bool_], shape: tuple[int, ...]) -> list[ScaleBar]:
     strokes = [s for s in _strokes(ink) if _free(ink, s)]
     whole = [s for s in strokes if s.width >= max(15, _LEAST_LENGTH * shape[1]) and not _is_rule(ink, s)]
-    whole = [s for s in whole if not _in_frame(ink, s, strokes)]
+    whole = [s for s in whole if not _in_frame(ink, s, strokes) and not _is_letter(ink, s)]
     bars = [_measured(values, ink, s) for s in whole]
     for left, right in _halves(strokes, ink):
         bars.append(_broken(values, ink, left, right))
@@ -193,6 +197,11 @@ def _is_rule(ink: npt.NDArray[np.bool_], s: Box) -> bool:
     return ink.shape[0] > 8 and (_reach(ink, s, s.left) >= most or _reach(ink, s, s.right - 1) >= most)
 
 
+def _is_letter(ink: npt.NDArray[np.bool_], s: Box) -> bool:
+    """A stroke of a wide letter: what stands on its end is as high as the stroke is long."""
+    return max(_reach(ink, s, s.left), _reach(ink, s, s.right - 1)) > max(0.5 * s.width, s.height)
+
+
 def _in_frame(ink: npt.NDArray[np.bool_], s: Box, strokes: list[Box]) -> bool:
     """A side of a rectangle: another stroke with the same ends, joined to this one at both."""
     for other in strokes:
@@ -241,6 +250,8 @@ def _measured(values: npt.NDArray[np.float32], ink: npt.NDArray[np.bool_], s: Bo
     kind = _kind(ink, s)
     tick = _tick_width(ink, s) if kind != "plain" else 0
     score = {"plain": 1.0, "ticks": 2.5, "ruler": 2.5}[kind] + _shape_score(s, ink.shape[1])
+    if kind == "plain" and min(_reach(ink, s, c) for c in (s.left + 1, s.right - 2)) > s.height + 3:
+        score -= 1.0  # ends that run on up or down: the margin of a box, or a letter
     return ScaleBar(length, s, kind, level, score=score, tick=tick)
 
 
@@ -260,6 +271,8 @@ def _shape_score(s: Box, columns: int) -> float:
 def _kind(ink: npt.NDArray[np.bool_], s: Box) -> str:
     """Whether ticks stand at the ends, or along the stroke as on a ruler."""
     ends = [_reach(ink, s, c) for c in (s.left, s.right - 1)]
+    if _tick_width(ink, s) > 6:
+        return "plain"
     least = max(s.height + 3, 1.5 * s.height)
     if min(ends) < least or max(ends) > 2.0 * min(ends):
         return "plain"
@@ -354,14 +367,19 @@ def label_boxes(grey: npt.NDArray[np.float32], bar: ScaleBar, *, banner_rows: in
 
 
 def _lines(window: npt.NDArray[np.float32], bar: ScaleBar, frame: Box) -> list[Box]:
-    """Lines of letters in a window, as bright as the bar first, then of the opposite brightness."""
-    ink = np.abs(window - bar.level) <= 0.35
-    if float(ink.mean()) > 0.5:
-        ink = np.abs(window - bar.level) <= 0.2
-    boxes = letters(ink_boxes(ink), rows=window.shape[0] + 40)
+    """Lines of letters in a window, about as bright as the bar."""
     stroke = bar.box.moved(-frame.top, -frame.left)
-    boxes = [b for b in boxes if not _is_part(b, stroke, bar.gap is not None)]
-    return text_lines(boxes)
+    lines: list[Box] = []
+    for tolerance in _LETTER_TOLERANCES:
+        boxes = letters(ink_boxes(np.abs(window - bar.level) <= tolerance), rows=window.shape[0] + 40)
+        boxes = [b for b in boxes if not _is_part(b, stroke, bar.gap is not None)]
+        lines += [line for line in text_lines(boxes) if not any(_same(line, known) for known in lines)]
+    return lines
+
+
+def _same(a: Box, b: Box) -> bool:
+    """Equal to two pixels on every side."""
+    return max(abs(a.top - b.top), abs(a.bottom - b.bottom), abs(a.left - b.left), abs(a.right - b.right)) <= 2
 
 
 def _is_part(box: Box, stroke: Box, broken: bool) -> bool:
