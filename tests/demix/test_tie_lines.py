@@ -1,6 +1,6 @@
 from __future__ import annotations
 
-from functools import lru_cache
+from functools import cache
 
 import mpmath
 import numpy as np
@@ -12,7 +12,7 @@ from poroscan.demix.mixture import Mixture
 from poroscan.demix.phase_diagram import PhaseDiagram, find_phase_diagram
 
 
-@lru_cache(maxsize=None)
+@cache
 def diagram_of(case: str) -> PhaseDiagram:
     return find_phase_diagram(CASES[case].mixture)
 
