@@ -1,7 +1,7 @@
 """One row per batch: mean over its particles with a 95 % interval, counts, and what was left out.
 
 Particles cut by the frame are left out; the others carry their frame weight, which makes up for large particles being cut more
-often (Miles 1974; Lantuéjoul 1980). Directions are not averaged.
+often (Miles 1974; Lantuéjoul 1980). The interval takes particles as nested in pictures. Directions are not averaged.
 """
 
 from __future__ import annotations
@@ -16,6 +16,7 @@ import numpy as np
 import numpy.typing as npt
 import pyarrow as pa
 
+from poroscan.measure.nested import nested_mean
 from poroscan.quantities import CATALOGUE, Quantity
 
 #: Columns before the quantities.
@@ -34,9 +35,9 @@ class BatchMean:
     Parameters
     ----------
     mean
-        Weighted mean; NaN where no particle has a value.
+        Estimate of the batch mean; NaN where no particle has a value.
     low, high
-        Ends of the 95 % interval of the mean; NaN with fewer than two particles.
+        Ends of its 95 % interval; NaN with fewer than two particles. With one picture it covers that picture only.
     sd
         Standard deviation between particles; NaN with fewer than two.
     number
@@ -81,6 +82,7 @@ class BatchCollector:
         self._counts: Counter[str] = Counter()
         self._values: list[npt.NDArray[np.float64]] = []
         self._weights: list[float] = []
+        self._images: list[int] = []
         self._scales: set[float | None] = set()
 
     def add_image(self, rows: Sequence[Mapping[str, Any]], *, measured: bool) -> None:
@@ -105,15 +107,16 @@ class BatchCollector:
             self._counts["particles_used"] += 1
             self._values.append(np.array([_number(row[column]) for column in _VALUE_COLUMNS]))
             self._weights.append(_weight(row))
+            self._images.append(self._counts["images"])
             self._scales.add(row["pixel_size_um"])
 
     def row(self) -> dict[str, Any]:
         """The row of batches.csv."""
         row: dict[str, Any] = {"batch": self._batch} | {c: self._counts[c] for c in COUNT_COLUMNS[1:]}
         table = np.array(self._values, dtype=np.float64).reshape(len(self._values), len(_VALUE_COLUMNS))
-        weights = np.array(self._weights, dtype=np.float64)
+        weights, images = np.array(self._weights, dtype=np.float64), np.array(self._images, dtype=np.intp)
         means = {
-            column: weighted_mean(table[good, j], weights[good])
+            column: batch_mean(table[good, j], weights[good], images[good])
             for j, column in enumerate(_VALUE_COLUMNS)
             for good in [np.isfinite(table[:, j])]
         }
@@ -135,30 +138,31 @@ def is_used(row: Mapping[str, Any]) -> bool:
     return row["view"] in ("edge", "interior") or not row["touches_frame"]
 
 
-def weighted_mean(values: npt.NDArray[np.float64], weights: npt.NDArray[np.float64]) -> BatchMean:
-    """Weighted mean with a 95 % t-interval.
+def batch_mean(
+    values: npt.NDArray[np.float64], weights: npt.NDArray[np.float64], images: npt.NDArray[np.intp]
+) -> BatchMean:
+    """Frame-weighted mean of a batch, with an interval that respects particles within pictures.
 
-    The number of particles that counts is Kish's effective one, (Σw)²/Σw², which is the plain number for equal weights.
+    The weighted mean m = Σwy/Σw is a ratio; each particle enters ``measure.nested.nested_mean`` with its linearised value
+    m + w(y − m)/mean(w), which is y itself where the weights are equal (Särndal, Swensson and Wretman, Model Assisted
+    Survey Sampling, 1992, section 5.5).
 
     Parameters
     ----------
     values
         Finite values, one per particle.
     weights
-        Positive weights of the same length.
+        Positive frame weights of the same length.
+    images
+        Number of the picture of each particle.
     """
-    from scipy.stats import t
-
     n = len(values)
     if n == 0:
         return BatchMean(math.nan, math.nan, math.nan, math.nan, 0)
     mean = float(np.average(values, weights=weights))
-    effective = float(weights.sum() ** 2 / (weights**2).sum())
-    if n < 2 or effective <= 1.0:
-        return BatchMean(mean, math.nan, math.nan, math.nan, n)
-    variance = float(np.average((values - mean) ** 2, weights=weights)) * effective / (effective - 1.0)
-    half = float(t.ppf(0.975, effective - 1.0)) * math.sqrt(variance / effective)
-    return BatchMean(mean, mean - half, mean + half, math.sqrt(variance), n)
+    result = nested_mean(mean + weights * (values - mean) / weights.mean(), images)
+    sd = math.sqrt(float(np.average((values - mean) ** 2, weights=weights)) * n / (n - 1)) if n > 1 else math.nan
+    return BatchMean(result.mean, result.low, result.high, sd, n)
 
 
 def _cells(q: Quantity, means: Mapping[str, BatchMean], *, one_scale: bool) -> Iterator[tuple[str, Any]]:

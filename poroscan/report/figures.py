@@ -49,7 +49,7 @@ def batch_comparison(batches: Sequence[Mapping[str, Any]]) -> Iterator[tuple[str
         if any(math.isfinite(r[1]) for r in rows):
             unit = f" ({q.unit_words})" if q.unit_words else ""
             words = "; ".join(f"{name} {value:.3g}" for name, value, *_ in rows if math.isfinite(value))
-            yield q.label, dot_chart(rows, x_label=f"{q.label}{unit}", label=f"{q.label}{unit} by batch: {words}")
+            yield f"{q.label}{unit}", dot_chart(rows, label=f"{q.label}{unit} by batch: {words}")
 
 
 def batch_figures(keys: Sequence[Key], curves: Curves, units: Units) -> Iterator[tuple[str, Markup]]:

@@ -198,7 +198,7 @@ def _particle(key: Key, folder: Path, shown: _Shown) -> _Particle:
     return _Particle(
         key[2],
         _data_uri(folder / f"particle-{key[2]}.webp"),
-        tuple(_number(row, k) for k in _BESIDE),
+        tuple(n for n in (_number(row, k) for k in _BESIDE) if n[1] != words.UNDEFINED),
         tuple(particle_figures(key, shown.curves, shown.units, row)),
         tuple(words.flag_words(row["flags"])),
     )

@@ -115,15 +115,13 @@ def line_chart(
     return _svg(body, label=label, size=size)
 
 
-def dot_chart(rows: Sequence[tuple[str, float, float, float]], *, x_label: str, label: str, width: int = 260) -> Markup:
-    """Values with intervals, one row each, names at the left above their line.
+def dot_chart(rows: Sequence[tuple[str, float, float, float]], *, label: str, width: int = 260) -> Markup:
+    """Values with intervals, one row each, each name above its line.
 
     Parameters
     ----------
     rows
         Name, value, low, high; NaN ends draw no interval, a NaN value no dot.
-    x_label
-        What the axis shows, with unit.
     label
         What the chart shows, for those who cannot see it.
     width
@@ -131,30 +129,30 @@ def dot_chart(rows: Sequence[tuple[str, float, float, float]], *, x_label: str, 
     """
     ends = [v for _, *values in rows for v in values if math.isfinite(v)]
     if not ends:
-        return Markup('<p class="nothing">{}</p>').format(f"{x_label}: nothing to show")
-    height = int(18 + 26 * len(rows) + 34)
+        return Markup('<p class="nothing">Nothing to show</p>')
+    height = 32 * len(rows) + 30
     low, high = min(ends), max(ends)
     pad = 0.08 * (high - low) or 0.1 * abs(high) or 1.0
-    frame = _Frame(low - pad, high + pad, 0.0, 1.0, width + _LEFT - 10, height, False)
+    frame = _Frame(low - pad, high + pad, 0.0, 1.0, width + _LEFT, height, False)
+    bottom = height - 22
     body = []
-    bottom = height - 34.0
     for tick in ticks(frame.x0, frame.x1):
-        px = float(frame.x(tick)) - _LEFT + 10
-        body.append(f'<path d="M{px:.1f} 8V{bottom:.0f}" stroke="{HAIR}"/>')
-        body.append(_text(px, bottom + 13, _tick_label(tick, frame.x0, frame.x1), anchor="middle"))
-    body.append(_text(10, height - 5, x_label, fill=INK))
-    for number, (name, value, lower, upper) in enumerate(rows):
-        y = 14.0 + 26 * number
-        body.append(_text(10, y + 2, name, fill=INK))
-        if math.isfinite(lower) and math.isfinite(upper):
-            a, b = (float(frame.x(v)) - _LEFT + 10 for v in (lower, upper))
-            body.append(f'<path d="M{a:.1f} {y + 11:.0f}H{b:.1f}" stroke="{BLUE}" stroke-width="3"/>')
-        if math.isfinite(value):
-            cx = float(frame.x(value)) - _LEFT + 10
-            body.append(
-                f'<circle cx="{cx:.1f}" cy="{y + 11:.0f}" r="4.5" fill="{BLUE}" stroke="#fff" stroke-width="1.5"/>'
-            )
+        x = float(frame.x(tick)) - _LEFT
+        body.append(f'<path d="M{x:.1f} 0V{bottom}" stroke="{HAIR}"/>')
+        body.append(_text(x, bottom + 14, _tick_label(tick, frame.x0, frame.x1), anchor="middle"))
+    for number, (name, *values) in enumerate(rows):
+        body += _dot(name, [float(frame.x(v)) - _LEFT for v in values], 12 + 32 * number)
     return _svg(body, label=label, size=(width, height))
+
+
+def _dot(name: str, places: Sequence[float], y: int) -> Iterable[str]:
+    """One row of a dot chart: the name on a white ground, the interval, the dot."""
+    x, low, high = places
+    yield f'<g paint-order="stroke" stroke="#fff" stroke-width="4">{_text(0, y, name, fill=INK)}</g>'
+    if math.isfinite(low) and math.isfinite(high):
+        yield f'<path d="M{low:.1f} {y + 10}H{high:.1f}" stroke="{BLUE}" stroke-width="3"/>'
+    if math.isfinite(x):
+        yield f'<circle cx="{x:.1f}" cy="{y + 10}" r="4.5" fill="{BLUE}" stroke="#fff" stroke-width="1.5"/>'
 
 
 def ticks(low: float, high: float, *, most: int = 5) -> list[float]:

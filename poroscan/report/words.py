@@ -86,19 +86,21 @@ def parted(text: str) -> tuple[str, str]:
     return value, ends.removesuffix(")")
 
 
-def with_unit(row: Row, key: str) -> str:
-    """As ``cell``, with the unit behind the value.
+def in_words(pattern: str, row: Row, key: str) -> str:
+    """A sentence around a length, with its interval at the end; empty where the length is undefined.
 
     Parameters
     ----------
+    pattern
+        Sentence with ``{}`` for value and unit, without full stop.
     row, key
         As in ``cell``.
     """
-    q, text = by_key(key), cell(row, key)
-    if text == UNDEFINED or not _finite(row.get(q.key)) or not q.unit_words:
-        return text
-    value, _, rest = text.partition(" ")
-    return f"{value}\u00a0{q.unit_words}" + (f" {rest}" if rest else "")
+    q, (value, ends) = by_key(key), parted(cell(row, key))
+    if value == UNDEFINED:
+        return ""
+    unit = f"\u00a0{q.unit_words}" if _finite(row.get(q.key)) and q.unit_words else ""
+    return pattern.format(f"{value}{unit}") + (f" (95 % interval {ends}{unit})." if ends else ".")
 
 
 def pixel_unit(q: Quantity) -> str:
@@ -112,21 +114,22 @@ def pixel_unit(q: Quantity) -> str:
     return q.unit_words.replace("µm", "px")
 
 
-def per_cent(row: Row, key: str) -> str:
-    """A fraction with its interval, in per cent.
+def per_cent(pattern: str, row: Row, key: str) -> str:
+    """A sentence around a fraction in per cent, with its interval at the end; empty where it is undefined.
 
     Parameters
     ----------
-    row, key
-        As in ``cell``.
+    pattern, row, key
+        As in ``in_words``.
     """
     value, low, high = (_hundredfold(row.get(k)) for k in (key, f"{key}_low", f"{key}_high"))
     if value is None:
-        return UNDEFINED
+        return ""
     decimals = decimals_of(value, low, high)
+    sentence = pattern.format(f"{fixed(value, decimals)}\u00a0%")
     if low is None or high is None:
-        return f"{fixed(value, decimals)}\u00a0%"
-    return f"{fixed(value, decimals)}\u00a0% (95 % interval {fixed(low, decimals)} to {fixed(high, decimals)}\u00a0%)"
+        return f"{sentence}."
+    return f"{sentence} (95 % interval {fixed(low, decimals)} to {fixed(high, decimals)}\u00a0%)."
 
 
 def batch_counts(row: Row) -> str:
@@ -156,15 +159,17 @@ def batch_sentences(row: Row) -> list[str]:
     if not row["particles_used"]:
         return ["No particle of this batch counts towards a mean; the particles below stand for themselves."]
     sentences = [
-        _sentence("Pores take up {} of the section.", per_cent(row, "porosity")),
-        _sentence("Half of the pore area lies in pores wider than {}.", with_unit(row, "pore_d50_um")),
-        _sentence("The walls between them have a median thickness of {}.", with_unit(row, "wall_d50_um")),
-        _sentence("The skin is {} thick.", with_unit(row, "skin_thickness_um")),
+        per_cent("Pores take up {} of the section", row, "porosity"),
+        in_words("Half of the pore area lies in pores wider than {}", row, "pore_d50_um"),
+        in_words("The walls between them have a median thickness of {}", row, "wall_d50_um"),
+        in_words("The skin is {} thick", row, "skin_thickness_um"),
         _asymmetry(row),
-        _sentence("Sections have an equivalent diameter of {}.", with_unit(row, "equivalent_diameter_um")),
+        in_words("Sections have an equivalent diameter of {}", row, "equivalent_diameter_um"),
     ]
     if row["particles_used"] == 1:
         sentences.append("With one particle there is no interval for the batch: nothing says how far others differ.")
+    elif row["images_measured"] == 1:
+        sentences.append("All particles come from one picture: the intervals say nothing of other pictures.")
     return [s for s in sentences if s]
 
 
@@ -200,16 +205,13 @@ def _asymmetry(row: Row) -> str:
     value, low, high = (_number(row.get(f"radial_asymmetry{end}")) for end in ("", "_low", "_high"))
     if math.isnan(value + low + high):
         return ""
-    text = f"radial asymmetry {interval(value, low, high)}"
+    shown, ends = parted(interval(value, low, high))
+    text = f"radial asymmetry {shown}, 95 % interval {ends}"
     if low > 0:
         return f"The outer half of the section is more porous than the inner half ({text})."
     if high < 0:
         return f"The outer half of the section is less porous than the inner half ({text})."
     return f"No difference between outer and inner half shows ({text})."
-
-
-def _sentence(pattern: str, text: str) -> str:
-    return "" if text == UNDEFINED else pattern.format(text)
 
 
 def _hundredfold(value: Any) -> float | None:

@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 from scipy import stats
 
-from poroscan.batch.summary import AVERAGED, BatchCollector, batch_columns, batch_schema, weighted_mean
+from poroscan.batch.summary import AVERAGED, BatchCollector, batch_columns, batch_mean, batch_schema
 from poroscan.batch.tables import particle_columns
 
 
@@ -15,29 +15,37 @@ def _row(**values: object) -> dict[str, object]:
     return row | {"particle": "1", "view": "whole", "touches_frame": False, "frame_weight": 1.0} | values
 
 
-def test_equal_weights_give_the_t_interval(rng: np.random.Generator) -> None:
+def test_one_particle_per_picture_gives_the_t_interval(rng: np.random.Generator) -> None:
     values = rng.normal(5.0, 2.0, 12)
-    result = weighted_mean(values, np.full(12, 3.0))
+    result = batch_mean(values, np.full(12, 3.0), np.arange(12))
     low, high = stats.ttest_1samp(values, 0.0).confidence_interval(0.95)
     assert (result.mean, result.low, result.high) == pytest.approx((values.mean(), low, high))
     assert result.sd == pytest.approx(values.std(ddof=1))
 
 
 def test_weights_count_as_copies_in_the_mean() -> None:
-    assert weighted_mean(np.array([1.0, 4.0]), np.array([2.0, 1.0])).mean == pytest.approx(np.mean([1.0, 1.0, 4.0]))
+    result = batch_mean(np.array([1.0, 4.0]), np.array([2.0, 1.0]), np.arange(2))
+    assert result.mean == pytest.approx(np.mean([1.0, 1.0, 4.0]))
 
 
 def test_intervals_hold_the_mean_as_often_as_they_say(rng: np.random.Generator) -> None:
-    samples = rng.normal(0.0, 1.0, (4000, 6))
-    held = [r.low <= 0.0 <= r.high for r in (weighted_mean(s, np.ones(6)) for s in samples)]
-    assert np.mean(held) == pytest.approx(0.95, abs=0.012)
+    """Six pictures of three particles, pictures differing as much as particles do, weights unrelated to the values."""
+    held, naive = [], []
+    for _ in range(1500):
+        values = (rng.normal(0.0, 1.0, (6, 1)) + rng.normal(0.0, 1.0, (6, 3))).ravel()
+        result = batch_mean(values, rng.uniform(1.0, 1.3, 18), np.repeat(np.arange(6), 3))
+        held.append(result.low <= 0.0 <= result.high)
+        low, high = stats.ttest_1samp(values, 0.0).confidence_interval(0.95)
+        naive.append(low <= 0.0 <= high)
+    assert np.mean(held) == pytest.approx(0.95, abs=0.025)
+    assert np.mean(naive) < 0.85  # what happens when pictures are forgotten
 
 
 def test_one_particle_has_no_interval() -> None:
-    result = weighted_mean(np.array([0.4]), np.array([1.0]))
+    result = batch_mean(np.array([0.4]), np.array([1.0]), np.array([0]))
     assert result.mean == 0.4
     assert math.isnan(result.low)
-    assert weighted_mean(np.array([]), np.array([])).number == 0
+    assert batch_mean(np.array([]), np.array([]), np.array([], dtype=int)).number == 0
 
 
 def test_cut_particles_are_left_out_and_counted() -> None:
