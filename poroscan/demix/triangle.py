@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from pathlib import Path
+from textwrap import shorten
 
 import numpy as np
 from matplotlib import rc_context
@@ -23,6 +24,7 @@ _GRID, _TIE = "#D8D8D8", "#7A8FA0"
 _HEIGHT = np.sqrt(3) / 2
 _TICKS = (0.2, 0.4, 0.6, 0.8)
 _TIE_LINES = 9
+_LONGEST_NAME = 40
 
 
 def to_plane(phi: FloatArray) -> FloatArray:
@@ -58,12 +60,12 @@ def draw_triangle(diagram: PhaseDiagram, formulation: Formulation) -> Figure:
     axes.set_aspect("equal")
     axes.set_axis_off()
     axes.set_xlim(-0.1, 1.1)
-    axes.set_ylim(-0.12, 0.92)
+    axes.set_ylim(-0.13, 0.92)
     _frame(axes, formulation)
     _regions(axes, diagram)
     _spinodal(axes, diagram)
     _points(axes, diagram, formulation)
-    figure.suptitle(formulation.name, fontsize=12)
+    figure.suptitle(shorten(formulation.name, 80, placeholder=" …"), fontsize=12, parse_math=False)
     figure.legend(loc="outside right center", frameon=False, fontsize=9, handlelength=1.8)
     return figure
 
@@ -100,10 +102,23 @@ def _frame(axes: Axes, formulation: Formulation) -> None:
     _scale_label(axes, (0, 0.5, 0.5), "← volume fraction of solvent", (-26, 14), turn=60)
     names = (formulation.nonsolvent.name, formulation.solvent.name, formulation.polymer.name)
     roles = ("non-solvent", "solvent", "polymer")
-    for corner, name, role, offset in zip(np.eye(3), names, roles, ((4, -24), (-4, -24), (0, 9)), strict=True):
-        label = name if name == role or name == role.replace("-", "") else f"{name} ({role})"
+    places = (("right", (34, -40)), ("left", (-34, -40)), ("center", (0, 9)))
+    for corner, name, role, (align, offset) in zip(np.eye(3), names, roles, places, strict=True):
+        named = name.replace("-", "").lower() != role.replace("-", "")
         x, y = to_plane(corner)
-        axes.annotate(label, (x, y), xytext=offset, textcoords="offset points", ha="center", fontsize=10.5)
+        axes.annotate(
+            f"{_short(name)} ({role})" if named else role,
+            (x, y),
+            xytext=offset,
+            textcoords="offset points",
+            ha=align,
+            fontsize=10.5,
+            parse_math=False,  # a name may hold a dollar sign
+        )
+
+
+def _short(text: str) -> str:
+    return shorten(text, _LONGEST_NAME, placeholder=" …")
 
 
 def _scale_label(

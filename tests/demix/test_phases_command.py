@@ -108,6 +108,15 @@ def test_the_picture_shows_every_part_and_names_it(recipe: Path, tmp_path: Path)
     assert [path.read_bytes() for path in save_triangle(draw_triangle(diagram, formulation), tmp_path)] == before
 
 
+def test_names_with_signs_of_markup_are_drawn_as_they_are(recipe: Path, tmp_path: Path) -> None:
+    name = r"a$b_{c} <&> \\frac"
+    recipe.write_text(PLAIN.replace('"water"', f"'{name}'").replace('"trial 7"', f"'{name}'"), encoding="utf-8")
+    formulation = load_formulation(recipe)
+    diagram = find_phase_diagram(formulation.mixture)
+    _, svg = save_triangle(draw_triangle(diagram, formulation), tmp_path)
+    assert f"{name} (non-solvent)" in " ".join(ET.parse(svg).getroot().itertext())
+
+
 def test_corners_of_the_picture() -> None:
     # n right, s left, p on top of an equilateral triangle of side 1
     corners = to_plane(np.eye(3))

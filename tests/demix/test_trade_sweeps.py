@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from itertools import pairwise
+
 import numpy as np
 import pytest
 
@@ -123,7 +125,7 @@ def test_chain_length_sweep(size: int) -> None:
 def test_raising_chi_pn_widens_the_gap_and_the_unstable_region() -> None:
     # common practice, no source; holds
     diagrams = [_diagram(pn=chi) for chi in (0.9, 1.5, 2.5)]
-    for earlier, later in zip(diagrams[:-1], diagrams[1:], strict=True):
+    for earlier, later in pairwise(diagrams):
         assert later.binodal_area > earlier.binodal_area
         assert later.spinodal_area > earlier.spinodal_area
 
