@@ -131,7 +131,7 @@ def _edges(bottom: npt.NDArray[np.float32], strip: Strip, start: int) -> list[in
 
 def _jumps(share: npt.NDArray[np.float64], row: int) -> bool:
     """Few flat pixels in the rows above, many from this row on."""
-    above = float(np.median(share[max(0, row - 4) : row]))
+    above = max(float(np.median(share[max(0, row - n) : row])) for n in (4, 16))  # 16: a thick bar is no picture
     quiet = float(np.median(share[row : row + 4]))
     return quiet >= _QUIET and share[row] >= 0.5 and above <= quiet - 0.35 and share[row - 1] < share[row] - 0.2
 
@@ -140,7 +140,7 @@ def _is_line(bottom: npt.NDArray[np.float32], strip: Strip, row: int) -> bool:
     """A line over the full width: one grey value that is neither the background's nor that of the row above."""
     values = bottom[row]
     level = float(np.median(values))
-    if abs(level - strip.levels[0]) < 0.12 or float(np.mean(np.abs(values - level) <= 0.06)) < 0.97:
+    if abs(level - strip.levels[0]) < 0.12 or float(np.mean(np.abs(values - level) <= 0.1)) < 0.93:
         return False
     return float(np.mean(np.abs(bottom[row - 1] - level) > 0.1)) > 0.6 and strip.flat[row + 1 : row + 6].max() >= _QUIET
 
@@ -150,13 +150,21 @@ def _is_banner(strip_values: npt.NDArray[np.float32], strip: Strip, *, closed: b
     rows = strip_values.shape[0]
     background = strip.levels[0]
     contrast = float(np.abs(strip_values - background).max())
-    equal = float(np.mean(np.abs(np.diff(strip_values, axis=1)) < 0.5 / 255))
-    if contrast < 0.15 or float(np.median(strip.flat[-rows:])) < _FLAT or equal < _EQUAL:
+    if contrast < 0.15 or float(np.median(strip.flat[-rows:])) < _FLAT or _equal(strip_values, strip) < _EQUAL:
         return False
     boxes = ink_boxes(np.abs(strip_values - background) > 0.5 * contrast)
     if longest_line(letters(boxes, rows=rows)) >= _MIN_LETTERS:
         return closed or not any(_foreign(b, rows) for b in boxes)
     return False
+
+
+def _equal(values: npt.NDArray[np.float32], strip: Strip) -> float:
+    """Share of neighbours of the background's level that are equal: drawn grey has no noise."""
+    ground = np.abs(values - strip.levels[0]) <= strip.tolerance
+    pairs = ground[:, 1:] & ground[:, :-1]
+    count = int(np.count_nonzero(pairs))
+    equal = np.abs(np.diff(values, axis=1)) < 0.5 / 255
+    return float(np.count_nonzero(equal & pairs)) / count if count else 0.0
 
 
 def _foreign(box: Box, rows: int) -> bool:
@@ -166,18 +174,30 @@ def _foreign(box: Box, rows: int) -> bool:
 
 
 def _banner_without_edge(bottom: npt.NDArray[np.float32], strip: Strip, start: int) -> int:
-    """A banner under a picture whose own bottom is just as flat: it begins as far above its text as the text ends above the
-    bottom. Asked for are a full line of letters and nothing else."""
-    if start >= len(strip.flat) - _MIN_ROWS:
-        return 0
+    """A banner under a picture whose own bottom is just as flat: the lowest group of marks, if these are letters and lines.
+
+    The group ends upwards where as many rows are empty as its letters are high; the banner begins as far above the group as
+    the group ends above the bottom, at most half the empty rows.
+    """
     values = bottom[start:]
-    contrast = float(np.abs(values - strip.levels[0]).max())
-    boxes = ink_boxes(np.abs(values - strip.levels[0]) > 0.5 * contrast) if contrast >= 0.3 else []
-    text = letters(boxes, rows=values.shape[0])
-    if longest_line(text) < _MIN_LETTERS or len(text) < max(2 * _MIN_LETTERS, 0.5 * len(boxes)):
+    contrast = float(np.abs(values - strip.levels[0]).max()) if values.size else 0.0
+    if values.shape[0] <= _MIN_ROWS or contrast < 0.3:
         return 0
-    margin = values.shape[0] - max(b.bottom for b in text)
-    top = max(0, min(b.top for b in text) - max(margin, 2))
-    count = values.shape[0] - top
-    whole = _is_banner(values[top:], strip, closed=False)
-    return count if whole and count <= bottom.shape[0] and top > 0 else 0
+    ink = np.abs(values - strip.levels[0]) > 0.5 * contrast
+    text = letters(ink_boxes(ink), rows=values.shape[0])
+    if not text:
+        return 0
+    gap = max(b.height for b in text[-_MIN_LETTERS:])
+    filled = np.flatnonzero(ink.any(axis=1))
+    breaks = np.flatnonzero(np.diff(filled) > gap)
+    first = int(filled[breaks[-1] + 1]) if breaks.size else int(filled[0])
+    empty = first - (int(filled[breaks[-1]]) + 1 if breaks.size else 0)
+    top = first - min(max(2, values.shape[0] - 1 - int(filled[-1])), empty // 2 + 1)
+    if top <= 0 and start > 0:
+        return 0
+    top = max(top, 0)
+    group = ink_boxes(ink[top:])
+    text = letters(group, rows=values.shape[0] - top)
+    if longest_line(text) < _MIN_LETTERS or len(text) < max(2 * _MIN_LETTERS, 0.5 * len(group)):
+        return 0
+    return values.shape[0] - top if _is_banner(values[top:], strip, closed=False) else 0

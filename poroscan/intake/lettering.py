@@ -49,13 +49,15 @@ def letters(boxes: list[Box], *, rows: int) -> list[Box]:
     return [b for b in boxes if low <= b.height <= min(high, 0.9 * rows) and 0.08 * b.height <= b.width <= 4 * b.height]
 
 
-def text_lines(boxes: list[Box]) -> list[Box]:
-    """Letters joined to lines: side by side, of similar height, with gaps below 1.1 heights.
+def text_lines(boxes: list[Box], *, gap: float) -> list[Box]:
+    """Letters joined to lines: side by side and of similar height.
 
     Parameters
     ----------
     boxes
         Letters, from left to right.
+    gap
+        Widest gap within a line, in heights of its letters.
 
     Returns
     -------
@@ -65,7 +67,7 @@ def text_lines(boxes: list[Box]) -> list[Box]:
     lines: list[Box] = []
     for box in boxes:
         for index in range(len(lines) - 1, -1, -1):
-            if _continues(lines[index], box):
+            if _continues(lines[index], box, gap):
                 lines[index] = _joined(lines[index], box)
                 break
         else:
@@ -73,11 +75,11 @@ def text_lines(boxes: list[Box]) -> list[Box]:
     return lines
 
 
-def _continues(line: Box, box: Box) -> bool:
+def _continues(line: Box, box: Box, gap: float) -> bool:
     height = max(line.height, box.height)
     overlap = min(line.bottom, box.bottom) - max(line.top, box.top)
     return (
-        box.left - line.right <= 1.1 * height
+        box.left - line.right <= gap * height
         and overlap >= 0.5 * min(line.height, box.height)
         and (height <= 2.2 * min(line.height, box.height))
     )

@@ -27,6 +27,9 @@ _SHARES = (0.5, 0.75, 0.3)  # of the strip's contrast at which strokes are cut o
 #: How far the grey of letters may lie from the bar's; the strict values part letters from a textured ground.
 _LETTER_TOLERANCES = (0.35, 0.2, 0.1)
 
+#: Widest gap within a label, in heights: between letters, and between number and unit where these stand far apart.
+_LETTER_GAPS = (1.0, 1.8)
+
 
 @dataclass(frozen=True)
 class ScaleBar:
@@ -126,7 +129,7 @@ def _on_strip(strip: npt.NDArray[np.float32]) -> list[ScaleBar]:
 
 def _in_picture(values: npt.NDArray[np.float32]) -> list[ScaleBar]:
     bars: list[ScaleBar] = []
-    for ink in (values >= 0.9, values <= 0.08, values >= 0.75):
+    for ink in (values >= 0.9, values <= 0.08, values >= 0.75, values <= 0.16):
         bars += _bars(values, ink, values.shape)
     return [bar for bar in bars if bar.kind != "plain" or bar.box.height >= 2]
 
@@ -337,7 +340,8 @@ def _dotted(strip: npt.NDArray[np.float32], ink: npt.NDArray[np.bool_]) -> list[
         spacing = np.diff(centres)
         if spacing.min() >= 4 and np.ptp(spacing) <= 2.01:
             box = Box(min(b.top for b in row), row[0].bottom, row[0].left, row[-1].right)
-            bars.append(ScaleBar(float(centres[-1] - centres[0]), box, "dots", float(strip[ink].max()), score=2.5))
+            level = float(np.median(strip[box.top : box.bottom][ink[box.top : box.bottom]]))
+            bars.append(ScaleBar(float(centres[-1] - centres[0]), box, "dots", level, score=2.5))
     return bars
 
 
@@ -373,7 +377,9 @@ def _lines(window: npt.NDArray[np.float32], bar: ScaleBar, frame: Box) -> list[B
     for tolerance in _LETTER_TOLERANCES:
         boxes = letters(ink_boxes(np.abs(window - bar.level) <= tolerance), rows=window.shape[0] + 40)
         boxes = [b for b in boxes if not _is_part(b, stroke, bar.gap is not None)]
-        lines += [line for line in text_lines(boxes) if not any(_same(line, known) for known in lines)]
+        for gap in _LETTER_GAPS:
+            joined = text_lines(boxes, gap=gap)
+            lines += [line for line in joined if not any(_same(line, known) for known in lines)]
     return lines
 
 
