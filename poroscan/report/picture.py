@@ -22,7 +22,7 @@ NUMBER_RGB = (255, 255, 255)
 
 _GREYS = 240
 _WASH = 0.5
-_OUTLINE, _PORE, _NUMBER, _BACK = 250, 251, 252, 0
+ORANGE_INDEX, PORE_INDEX, _NUMBER, _BACK = 250, 251, 252, 0
 _DIGITS = {  # 3 × 5 dots, row by row
     "0": "111101101101111",
     "1": "010110010010111",
@@ -59,8 +59,8 @@ def draw(
         uint8 of the same shape; ``palette()`` gives the colours.
     """
     index = (np.clip(_stretched(grey), 0.0, 1.0) * (_GREYS - 1)).astype(np.uint8)
-    index[_inner_edge(pores)] = _PORE
-    index[_outline(labels, thickness=1 + max(grey.shape) // 900)] = _OUTLINE
+    index[_inner_edge(pores)] = PORE_INDEX
+    index[_outline(labels, thickness=1 + max(grey.shape) // 900)] = ORANGE_INDEX
     if numbers:
         _draw_numbers(index, labels)
     return index
@@ -70,7 +70,7 @@ def palette() -> npt.NDArray[np.uint8]:
     """Colours of the indices that ``draw`` gives, shape (256, 3)."""
     colours = np.zeros((256, 3), dtype=np.uint8)
     colours[:_GREYS] = np.linspace(0, 255, _GREYS).round().astype(np.uint8)[:, None]
-    colours[_OUTLINE], colours[_PORE], colours[_NUMBER] = OUTLINE_RGB, PORE_RGB, NUMBER_RGB
+    colours[ORANGE_INDEX], colours[PORE_INDEX], colours[_NUMBER] = OUTLINE_RGB, PORE_RGB, NUMBER_RGB
     return colours
 
 
