@@ -32,6 +32,10 @@ _PUBLIC = {
     "PixelSize": "poroscan.section",
     "Section": "poroscan.section",
     "PoroscanError": "poroscan.errors",
+    "Formulation": "poroscan.demix.formulation",
+    "load_formulation": "poroscan.demix.formulation",
+    "Mixture": "poroscan.demix.mixture",
+    "find_phase_diagram": "poroscan.demix.phase_diagram",
 }
 
 __all__ = ["__version__", *_PUBLIC]
