@@ -5,8 +5,6 @@ Everything here treats rows and columns alike, so that turning a picture by 90°
 
 from __future__ import annotations
 
-import math
-
 import numpy as np
 import numpy.typing as npt
 from scipy import ndimage
@@ -45,32 +43,6 @@ def noise_level(grey: FloatArray) -> float:
     second = g[:-2] - 2 * g[1:-1] + g[2:]
     mixed = second[:, :-2] - 2 * second[:, 1:-1] + second[:, 2:]
     return float(np.median(np.abs(mixed))) / 0.6745 / 6.0
-
-
-def smooth(grey: Float32, noise: float, contrast: float) -> tuple[Float32, float]:
-    """Gaussian smoothing, just wide enough for the noise.
-
-    The width is chosen so that the noise left is a fifteenth of ``contrast``; a Gaussian of width s leaves white noise
-    of 1/(2 s √π).
-
-    Parameters
-    ----------
-    grey
-        2-D float32 array.
-    noise
-        Standard deviation of the pixel noise.
-    contrast
-        Grey difference that must stay visible.
-
-    Returns
-    -------
-    smoothed : float32 array
-    sigma : float
-        Width used, in pixels; between 0.6 and 2.5.
-    """
-    needed = 15.0 * noise / (contrast * 2.0 * math.sqrt(math.pi)) if contrast > 0 else 2.5
-    sigma = min(max(needed, 0.6), 2.5)
-    return ndimage.gaussian_filter(grey, sigma, truncate=3.0), sigma
 
 
 def shading(grey: Float32, inside: BoolArray, *, degree: int = 2) -> Float32:

@@ -90,9 +90,9 @@ def find_levels(grey: Float32, inside: BoolArray, *, residual_noise: float, hint
     histogram = _histogram(grey, inside, low, high, residual_noise)
     peak = _material_peak(histogram, hint)
     material = float(histogram.centres[peak])
-    spread = max(_upper_spread(histogram.every, peak) * histogram.width, residual_noise, 1e-6)
+    spread = max(_spread(histogram.every, peak) * histogram.width, residual_noise, 1e-6)
     limit, excess = _limit(histogram, peak, spread)
-    pore = _pore_mode(histogram, material, spread, limit) if math.isfinite(limit) else math.nan
+    pore = _pore_mode(histogram, material, limit) if math.isfinite(limit) else math.nan
     return Levels(material, spread, pore, limit, excess)
 
 
@@ -138,33 +138,57 @@ def _material_peak(histogram: _Histogram, hint: float | None) -> int:
     return min(tops, key=lambda top: abs(float(histogram.centres[top]) - hint))
 
 
-def _upper_spread(counts: Counts, peak: int) -> float:
-    """Standard deviation in bins from where the upper side of the mode falls to exp(−1/2)."""
-    below = np.nonzero(counts[peak:] < math.exp(-0.5) * counts[peak])[0]
-    return float(below[0]) if below.size else 1.0
+def _spread(counts: Counts, peak: int) -> float:
+    """Standard deviation in bins from where the mode falls to exp(−1/2), on its narrower side.
+
+    Bright edges widen the upper side and pores the lower one; neither belongs to the material.
+    """
+    level = math.exp(-0.5) * counts[peak]
+    above, below = np.nonzero(counts[peak:] < level)[0], np.nonzero(counts[peak::-1] < level)[0]
+    return float(min(x[0] for x in (above, below, np.array([counts.size])) if x.size))
 
 
 def _limit(histogram: _Histogram, peak: int, spread: float) -> tuple[float, float]:
     x, counts = histogram.centres, histogram.every
     model = counts[peak] * np.exp(-0.5 * ((x - x[peak]) / spread) ** 2)
-    more = counts[:peak] - model[:peak]
-    excess = float(np.clip(more, 0, None).sum() / counts.sum())
+    more = np.clip(counts[:peak] - model[:peak], 0, None)
+    excess = float(more.sum() / counts.sum())
+    if excess <= 0:
+        return math.nan, 0.0
+    middle = float(x[int(np.searchsorted(np.cumsum(more), 0.5 * more.sum()))])
     below = np.nonzero((counts[:peak] >= 2.0 * model[:peak]) & (x[:peak] < x[peak] - 1.5 * spread))[0]
-    return (float(x[below[-1]]), excess) if below.size else (math.nan, excess)
+    if below.size == 0 or x[peak] - middle < DEPTH * spread:
+        return math.nan, excess
+    return float(x[below[-1]]), excess
 
 
-def _pore_mode(histogram: _Histogram, material: float, spread: float, limit: float) -> float:
-    """The darkest mode of flat pixels, where it is clearly apart and holds a good share of what is below the material."""
-    below = histogram.flat[histogram.centres < limit].sum()
-    for top, mass, _, right in _modes(histogram.flat):
+#: Pores lie at least this many standard deviations of the material below it in the median; what lies nearer is the roughness
+#: of a dense face.
+DEPTH = 5.0
+
+
+def _pore_mode(histogram: _Histogram, material: float, limit: float) -> float:
+    """The darkest mode that holds a fifth of the flat pixels below the limit, if it is a level and not a shade among others."""
+    below = float(histogram.flat[histogram.centres < limit].sum())
+    for top, mass, _, _ in _modes(histogram.flat):
         level = float(histogram.centres[top])
-        if level >= min(limit, material - 2 * spread):
-            break
-        valley = float(histogram.flat[top : right + 1].min())
-        share = mass / max(below, 1.0)
-        if share >= 0.3 and valley <= 0.35 * histogram.flat[top] and mass >= 30:
-            return level
+        if level < limit and mass >= max(0.2 * below, 30.0):
+            return level if _stands_apart(histogram, level, material) else math.nan
     return math.nan
+
+
+def _stands_apart(histogram: _Histogram, level: float, material: float) -> bool:
+    """Whether most dark pixels are near the level, and few flat ones between it and the material.
+
+    With c the contrast of material and level: at least half of all pixels darker than material − 0.3 c lie within −0.5 c … +0.3 c of
+    the level, and the flat pixels are less than 0.4 times as dense in the middle third as at the level.
+    """
+    x = (histogram.centres - level) / (material - level)
+    near = float(histogram.every[(x >= -0.5) & (x < 0.3)].sum())
+    if near < 0.5 * float(histogram.every[x < 0.7].sum()):
+        return False
+    gap, mode = histogram.flat[(x >= 0.35) & (x < 0.65)], histogram.flat[np.abs(x) <= 0.15]
+    return gap.size > 0 and float(gap.mean()) < 0.4 * float(mode.mean())
 
 
 def bright_share(grey: FloatArray, inside: BoolArray, levels: Levels) -> float:

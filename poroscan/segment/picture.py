@@ -10,7 +10,7 @@ import numpy.typing as npt
 from scipy import ndimage
 
 from poroscan.section import BoolArray, Picture, Section, View
-from poroscan.segment.cleanup import Float32, bands, noise_level, shading, smooth
+from poroscan.segment.cleanup import Float32, bands, noise_level, shading
 from poroscan.segment.closing import close_body, distance_to, fill_holes, split_touching
 from poroscan.segment.frame import frame_weight
 from poroscan.segment.histogram import Levels, bright_share, find_levels
@@ -18,6 +18,7 @@ from poroscan.segment.outline import BY_GREY, Candidate, find_bodies, reduce_pic
 from poroscan.segment.pores import PORES, Inside, Pores, fixed, threshold_of
 from poroscan.segment.result import Segmentation, Threshold
 from poroscan.segment.settings import SegmentSettings
+from poroscan.segment.variation import smooth_edges_kept
 from poroscan.segment.view import arc_points, fit_circle, is_edge
 
 Labels = npt.NDArray[np.int32]
@@ -309,29 +310,42 @@ def _weight(particle: BoolArray, frame: tuple[int, ...], cut: bool, view: View) 
 def _find_pores(
     grey: Float32, particle: BoolArray, noise: float, settings: SegmentSettings, raw: BoolArray | None
 ) -> tuple[Pores, Threshold | None]:
-    spread = float(np.subtract(*np.percentile(grey[particle], [99, 1])))
-    smoothed, sigma = smooth(grey, noise, spread) if settings.denoise else (grey, 0.0)
-    if settings.flatten:
-        smoothed = smoothed - shading(smoothed, particle)
-    residual = noise / (2 * sigma * math.sqrt(math.pi)) if sigma else noise
-    hint = _rim_grey(smoothed, particle, raw)
-    levels = find_levels(smoothed, particle, residual_noise=residual, hint=hint)
-    if settings.destripe:
-        material = particle & (np.abs(smoothed - levels.material) < 2.5 * levels.spread)
-        smoothed = smoothed - bands(smoothed, material)
-        levels = find_levels(smoothed, particle, residual_noise=residual, hint=hint)
+    level, residual = _levelled(grey, particle, noise, settings, raw)
+    levels = find_levels(level, particle, residual_noise=residual, hint=_rim_grey(level, particle, raw))
     bright = settings.pore_shade == "bright" or (
-        settings.pore_shade == "auto" and _bright_pores(smoothed, particle, levels)
+        settings.pore_shade == "auto" and _bright_pores(level, particle, levels)
     )
     if bright:
-        smoothed = -smoothed
-        levels = find_levels(smoothed, particle, residual_noise=residual, hint=-levels.material)
-    inside = Inside(smoothed, particle, residual, levels)
+        level = -level
+        levels = find_levels(level, particle, residual_noise=residual, hint=-levels.material)
+    inside = Inside(level, particle, residual, levels)
     if settings.threshold is not None:
         result = fixed(inside, settings, -settings.threshold if bright else settings.threshold)
     else:
         result = PORES["auto" if settings.pores == "trained" else settings.pores](inside, settings)
     return result, threshold_of(result, bright=bright)
+
+
+def _levelled(
+    grey: Float32, particle: BoolArray, noise: float, settings: SegmentSettings, raw: BoolArray | None
+) -> tuple[Float32, float]:
+    """Grey values without shading, bands and noise, and the noise left."""
+    rough = ndimage.gaussian_filter(grey, 1.0)
+    surface = shading(rough, particle) if settings.flatten else np.zeros_like(grey)
+    if settings.destripe:
+        rough = rough - surface
+        residual = noise / (2 * math.sqrt(math.pi))
+        levels = find_levels(rough, particle, residual_noise=residual, hint=_rim_grey(rough, particle, raw))
+        material = particle & (np.abs(rough - levels.material) < 2.5 * levels.spread)
+        surface = surface + bands(rough, material)
+    level = grey - surface
+    if not settings.denoise:
+        return level, noise
+    return smooth_edges_kept(level, particle, weight=noise), NOISE_LEFT * noise
+
+
+#: Standard deviation left by smoothing with the noise as its weight, over the noise (measured on flat fields of white noise).
+NOISE_LEFT = 0.28
 
 
 def _rim_grey(grey: Float32, particle: BoolArray, raw: BoolArray | None) -> float | None:

@@ -74,7 +74,7 @@ _MaskAt = Callable[[float], BoolArray]
 def auto(inside: Inside, settings: SegmentSettings) -> Pores:
     """Half-way between pore and material where pores have a level of their own, else the lower limit of the material."""
     levels = inside.levels
-    if not math.isfinite(levels.limit) or levels.excess < 0.0005:
+    if not math.isfinite(levels.limit):
         return _none(inside, "nothing darker than the material", ("no_pores",))
     if math.isfinite(levels.pore):
         level = 0.5 * (levels.pore + levels.material)
@@ -84,7 +84,8 @@ def auto(inside: Inside, settings: SegmentSettings) -> Pores:
         method = "lower limit of the material's grey values"
     spread = abs(levels.limit - level) / math.sqrt(3.0) if math.isfinite(levels.pore) else 0.35 * levels.spread
     uncertainty = math.hypot(min(spread, 0.1 * (levels.material - level)), 0.25 * inside.noise)
-    return _banded(inside, settings, lambda shift: inside.grey < level + shift, level, uncertainty, method)
+    shrink = math.isfinite(levels.pore)
+    return _banded(inside, settings, lambda s: inside.grey < level + s, level, uncertainty, method, shrink=shrink)
 
 
 def global_threshold(inside: Inside, settings: SegmentSettings) -> Pores:
@@ -148,14 +149,21 @@ PORES: Mapping[str, Callable[[Inside, SegmentSettings], Pores]] = MappingProxyTy
 
 
 def _banded(
-    inside: Inside, settings: SegmentSettings, mask_at: _MaskAt, level: float, uncertainty: float, method: str
+    inside: Inside,
+    settings: SegmentSettings,
+    mask_at: _MaskAt,
+    level: float,
+    uncertainty: float,
+    method: str,
+    *,
+    shrink: bool = True,
 ) -> Pores:
     least = settings.min_pore_px or 4
     middle = _half_height(inside)
     masks = []
     for shift in (0.0, -uncertainty, uncertainty):
         rough = tidy(mask_at(shift) & inside.mask, inside.mask, least)
-        masks.append(tidy(_on_the_slope(rough, inside, middle + shift), inside.mask, least))
+        masks.append(tidy(_on_the_slope(rough, inside, middle + shift, shrink=shrink), inside.mask, least))
     pores = masks[0]
     share = float(pores.sum()) / max(float(inside.mask.sum()), 1.0)
     flags = ("no_pores",) if share == 0.0 else (("all_pores",) if share > 0.97 else ())
@@ -176,7 +184,7 @@ def _half_height(inside: Inside) -> Float32:
     return middle * np.float32(0.5)
 
 
-def _on_the_slope(pores: BoolArray, inside: Inside, middle: Float32) -> BoolArray:
+def _on_the_slope(pores: BoolArray, inside: Inside, middle: Float32, *, shrink: bool) -> BoolArray:
     """Move the borders of pores to half height of their own slope.
 
     A bright edge, a shallow pore or a small one shifts the crossing of a common threshold away from the steepest place; half
@@ -184,7 +192,8 @@ def _on_the_slope(pores: BoolArray, inside: Inside, middle: Float32) -> BoolArra
     """
     wall = inside.mask & ~pores
     near = ndimage.binary_dilation(pores, iterations=2) & ndimage.binary_dilation(wall, iterations=2) & inside.mask
-    return np.where(near, inside.grey < middle, pores)
+    moved = np.where(near, inside.grey < middle, pores)
+    return moved if shrink else moved | pores
 
 
 def _none(inside: Inside, method: str, flags: tuple[str, ...]) -> Pores:
