@@ -1,4 +1,4 @@
-"""Build an atlas: pilot, rounds of simulations on all cores, each run committed atomically, resumable at any moment."""
+"""Build an atlas: rounds of simulations on all cores, each run committed atomically, resumable at any moment."""
 
 from __future__ import annotations
 
@@ -7,19 +7,21 @@ import json
 import os
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from concurrent.futures import Future, ProcessPoolExecutor, as_completed
-from dataclasses import asdict, dataclass, field, replace
+from dataclasses import asdict, dataclass, field, fields
 from multiprocessing import get_context
 from pathlib import Path
 from typing import Any
 
 import numpy as np
+import numpy.typing as npt
 
 from poroscan import __version__
 from poroscan.atlas.plan import Known, deficits, propose
 from poroscan.atlas.run_file import AtlasRun, crop_to_particle, load_run, save_run
 from poroscan.atlas.space import Space, formulation_at
 from poroscan.demix.particle import SimulationResult, simulate
-from poroscan.demix.path import PATH_COLUMNS
+from poroscan.demix.path import PATH_COLUMNS, FirstDemixing
+from poroscan.demix.regime import REGIMES
 from poroscan.demix.simulation_settings import SimulationSettings
 from poroscan.errors import SimulationError, StoreError
 
@@ -27,6 +29,7 @@ from poroscan.errors import SimulationError, StoreError
 LEAST_KEPT = 0.6
 #: Outcomes that are no regime: nothing is kept of such a run but the fact.
 DISSOLVED, FAILED = "dissolved", "failed"
+_MOST_ROUNDS = 1000
 
 
 @dataclass(frozen=True)
@@ -43,10 +46,10 @@ class BuildPlan:
         Runs wanted of each regime.
     total
         Runs wanted in all.
+    first
+        Runs of the first round, which fills the space evenly.
     round_size
-        Runs between two looks at what is missing.
-    pilot
-        Runs of the pilot, on a grid of half the edge.
+        Runs of the later rounds, between two looks at what is missing.
     seed
         Root of all randomness.
 
@@ -60,19 +63,24 @@ class BuildPlan:
     pinned: Mapping[str, float] = field(default_factory=dict)
     per_regime: int = 60
     total: int = 500
+    first: int = 128
     round_size: int = 24
-    pilot: int = 512
     seed: int = 0
 
     def __post_init__(self) -> None:
-        for name in ("per_regime", "total", "round_size", "pilot"):
+        for name in ("per_regime", "total", "first", "round_size"):
             if getattr(self, name) < 1:
                 raise ValueError(f"{name} must be at least 1, not {getattr(self, name)!r}")
 
     def digest(self) -> str:
         """SHA-256 of what decides the runs (not of how many are wanted)."""
-        parts = {"settings": asdict(self.settings), "pinned": dict(self.pinned), "seed": self.seed, "pilot": self.pilot,
-                 "round_size": self.round_size}  # fmt: skip
+        parts = {
+            "settings": asdict(self.settings),
+            "pinned": dict(self.pinned),
+            "seed": self.seed,
+            "first": self.first,
+            "round_size": self.round_size,
+        }
         return hashlib.sha256(json.dumps(parts, sort_keys=True).encode()).hexdigest()
 
 
@@ -112,16 +120,13 @@ def build(
     _hold_plan(root, plan)
     space = Space(plan.pinned)
     context = get_context("spawn")
+    known: list[Known] = []
     with ProcessPoolExecutor(workers, mp_context=context) as pool:
-        pilot = _work(root / "pilot.json", _pilot_jobs(space, plan), pool, _pilot_one, progress)
-        number = 0
-        while True:
+        for number in range(_MOST_ROUNDS):
             known = list(_finished(root))
-            if number * plan.round_size >= 40 * plan.total or _is_complete(known, plan):
+            if _is_complete(known, plan):
                 break
-            jobs = _round_jobs(root, space, pilot, plan, number)
-            _run_round(root, jobs, pool, progress)
-            number += 1
+            _run_round(root, _round_jobs(root, space, plan, number), pool, progress)
     return _count(known)
 
 
@@ -146,25 +151,23 @@ def _hold_plan(root: Path, plan: BuildPlan) -> None:
     _write_json(path, {"digest": plan.digest(), "settings": asdict(plan.settings), "pinned": dict(plan.pinned)})
 
 
-def _pilot_jobs(space: Space, plan: BuildPlan) -> list[Job]:
-    half = replace(plan.settings, cells=plan.settings.cells // 2, radius=plan.settings.radius / 2, snapshots=())
-    points = space.points(plan.pilot, start=0, seed=plan.seed)
-    return [Job(f"p{i:05d}", p, plan.seed + i, half) for i, p in enumerate(points)]
-
-
-def _round_jobs(root: Path, space: Space, pilot: Sequence[Known], plan: BuildPlan, number: int) -> list[Job]:
-    """Jobs of a round: as written before it started, or proposed now from all rounds before it."""
+def _round_jobs(root: Path, space: Space, plan: BuildPlan, number: int) -> list[Job]:
+    """Jobs of a round: as written before it started, or chosen now from all rounds before it."""
     path = root / f"round-{number:03d}.json"
     if not path.exists():
-        earlier = [k for k in _finished(root) if k.outcome not in (DISSOLVED, FAILED)]
-        points = propose(
-            space, pilot, earlier, n=plan.round_size, per_regime=max(plan.per_regime, plan.total // 5),
-            seed=plan.seed + 1000 + number,
-        )  # fmt: skip
-        _write_json(path, [dict(p) for p in points])
-    points = json.loads(path.read_text())
-    first = number * plan.round_size
-    return [Job(f"r{first + i:05d}", p, plan.seed + 100_000 + first + i, plan.settings) for i, p in enumerate(points)]
+        _write_json(path, [dict(p) for p in _points(root, space, plan, number)])
+    first = plan.first + (number - 1) * plan.round_size if number else 0
+    return [
+        Job(f"r{first + i:05d}", point, plan.seed + first + i, plan.settings)
+        for i, point in enumerate(json.loads(path.read_text()))
+    ]
+
+
+def _points(root: Path, space: Space, plan: BuildPlan, number: int) -> tuple[dict[str, float], ...]:
+    if number == 0:
+        return space.points(plan.first, start=0, seed=plan.seed)
+    wanted = max(plan.per_regime, -(-plan.total // len(REGIMES)))
+    return propose(space, list(_finished(root)), n=plan.round_size, per_regime=wanted, seed=plan.seed + number)
 
 
 def _run_round(
@@ -176,32 +179,6 @@ def _run_round(
         outcome = done.result()
         if progress is not None:
             progress(waiting[done].name, outcome)
-
-
-def _work(
-    path: Path, jobs: Sequence[Job], pool: ProcessPoolExecutor, one: Callable[[Job], str],
-    progress: Callable[[str, str], None] | None,
-) -> list[Known]:  # fmt: skip
-    """Outcome of every pilot job; those already in the file are not made again."""
-    outcomes: dict[str, str] = json.loads(path.read_text()) if path.exists() else {}
-    waiting = {pool.submit(one, job): job for job in jobs if job.name not in outcomes}
-    for done in as_completed(waiting):
-        name = waiting[done].name
-        outcomes[name] = done.result()
-        if progress is not None:
-            progress(name, outcomes[name])
-        if len(outcomes) % 16 == 0:
-            _write_json(path, outcomes)
-    _write_json(path, outcomes)
-    return [Known(job.parameters, outcomes[job.name]) for job in jobs]
-
-
-def _pilot_one(job: Job) -> str:
-    try:
-        result = simulate(formulation_at(job.parameters, job.settings), seed=job.seed)
-    except (SimulationError, ValueError):
-        return FAILED
-    return result.regime if _kept(result, job) else DISSOLVED
 
 
 def run_job(root: str, job: Job) -> str:
@@ -232,11 +209,17 @@ def _as_run(job: Job, result: SimulationResult) -> AtlasRun:
         reading={k: v for k, v in _plain(asdict(result.reading)) if k != "regime"},
         field=crop_to_particle(result.polymer, job.parameters["polymer"] / 2),
         path_columns=PATH_COLUMNS,
-        path=np.array([list(asdict(row).values()) for row in result.path], dtype=np.float32),
+        path=_table(result.path),
+        demixing_columns=tuple(f.name for f in fields(FirstDemixing)),
+        demixings=_table(result.demixings).reshape(-1, len(fields(FirstDemixing))),
         settings=asdict(job.settings),
         seed=job.seed,
         version=__version__,
     )
+
+
+def _table(rows: Sequence[Any]) -> npt.NDArray[np.float32]:
+    return np.array([list(asdict(row).values()) for row in rows], dtype=np.float32)
 
 
 def _plain(values: Mapping[str, Any]) -> Iterator[tuple[str, Any]]:

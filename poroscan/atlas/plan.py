@@ -1,8 +1,7 @@
 """Which formulations to simulate next: space-filling first, then where regimes and their borders are thinly covered.
 
-A cheap pilot on a small grid maps where the regimes lie. Each round then draws formulations for the regimes that still lack
-runs, with a chance that grows with the nearest neighbours' share of that regime, so that both its middle and its borders are
-covered. Everything follows from the seed and the runs made so far: an interrupted build goes on as if it had not
+The first round fills the space evenly. Each later one draws formulations for the regimes that still lack runs, with a chance
+that grows with the nearest neighbours' share of that regime, so that both its middle and its borders are covered. Everything follows from the seed and the runs made so far: an interrupted build goes on as if it had not
 stopped.
 """
 
@@ -40,17 +39,15 @@ def deficits(known: Sequence[Known], *, per_regime: int) -> dict[str, int]:
     return {regime: max(0, per_regime - counts[regime]) for regime in REGIMES}
 
 
-def propose(
-    space: Space, pilot: Sequence[Known], runs: Sequence[Known], *, n: int, per_regime: int, seed: int
-) -> tuple[dict[str, float], ...]:
+def propose(space: Space, runs: Sequence[Known], *, n: int, per_regime: int, seed: int) -> tuple[dict[str, float], ...]:
     """Formulations of the next round.
 
     Parameters
     ----------
     space
         Axes and pinned values.
-    pilot, runs
-        What is known from the pilot and from the atlas itself.
+    runs
+        Every run made so far.
     n
         Formulations wanted.
     per_regime
@@ -63,11 +60,11 @@ def propose(
     ValueError
         If nothing is known yet.
     """
-    if not (pilot or runs):
-        raise ValueError("propose needs a pilot or runs to learn from, but nothing is known yet")
+    if not runs:
+        raise ValueError("propose needs runs to learn from, but none is made yet")
     rng = np.random.default_rng(seed)
     candidates = sobol(_CANDIDATES, len(AXES), seed=seed)
-    chance = _regime_chances(candidates, [*pilot, *runs])
+    chance = _regime_chances(candidates, runs)
     missing = deficits(runs, per_regime=per_regime)
     want = np.array([missing[r] for r in REGIMES], dtype=float)
     if want.sum() == 0:

@@ -47,6 +47,8 @@ class AtlasRun:
         Polymer fraction, float32, 2-D or 3-D, cropped to the particle.
     path_columns, path
         Names and values (rows, columns) of the path table; no rows for a user's own field.
+    demixing_columns, demixings
+        First demixing of every shell, from which the regime can be read again.
     settings
         Grid and stopping rules as plain values.
     seed
@@ -64,6 +66,8 @@ class AtlasRun:
     field: npt.NDArray[np.float32]
     path_columns: tuple[str, ...]
     path: npt.NDArray[np.float32]
+    demixing_columns: tuple[str, ...]
+    demixings: npt.NDArray[np.float32]
     settings: Mapping[str, Any]
     seed: int
     version: str
@@ -103,6 +107,7 @@ def save_run(path: str | Path, run: AtlasRun) -> None:
         "format": FORMAT, "name": run.name, "parameters": dict(run.parameters), "regime": run.regime,
         "reading": dict(run.reading), "settings": dict(run.settings), "seed": run.seed, "version": run.version,
         "source": run.source, "path_columns": list(run.path_columns),
+        "demixing_columns": list(run.demixing_columns),
     }  # fmt: skip
     # thermal noise and the solver leave fractions a little outside 0…1; the stored picture of the particle does not need them
     steps = np.rint(np.clip(run.field, 0, 1) * LEVELS).astype(np.uint8)
@@ -110,6 +115,7 @@ def save_run(path: str | Path, run: AtlasRun) -> None:
         "head": np.frombuffer(json.dumps(head, sort_keys=True).encode(), dtype=np.uint8),
         "field": steps,
         "path": np.asarray(run.path, dtype=np.float32),
+        "demixings": np.asarray(run.demixings, dtype=np.float32),
     }
     target = Path(path)
     temporary = target.with_name(f".{target.name}.{os.getpid()}.tmp")
@@ -157,7 +163,7 @@ def run_from_bytes(data: bytes, *, name: str) -> AtlasRun:
     try:
         with np.load(io.BytesIO(data), allow_pickle=False) as arrays:
             head = json.loads(arrays["head"].tobytes().decode())
-            field, path = arrays["field"], arrays["path"]
+            field, path, demixings = arrays["field"], arrays["path"], arrays["demixings"]
     except (ValueError, KeyError, OSError, zipfile.BadZipFile, EOFError) as error:
         raise StoreError(f"{name}: not a run of an atlas, or damaged ({error})") from error
     if head.get("format") != FORMAT:
@@ -167,6 +173,7 @@ def run_from_bytes(data: bytes, *, name: str) -> AtlasRun:
     return AtlasRun(
         name=head["name"], parameters=head["parameters"], regime=head["regime"], reading=head["reading"],
         field=field.astype(np.float32) / LEVELS, path_columns=tuple(head["path_columns"]), path=path,
+        demixing_columns=tuple(head["demixing_columns"]), demixings=demixings,
         settings=head["settings"], seed=head["seed"], version=head["version"], source=head["source"],
     )  # fmt: skip
 

@@ -13,7 +13,7 @@ from poroscan.demix.checkpoint import Checkpoint, load_checkpoint, save_checkpoi
 from poroscan.demix.formulation import Formulation
 from poroscan.demix.initial import initial_fields
 from poroscan.demix.lever import Lever
-from poroscan.demix.path import INTERFACE_WIDTHS, PathRecorder, PathRow
+from poroscan.demix.path import INTERFACE_WIDTHS, FirstDemixing, PathRecorder, PathRow
 from poroscan.demix.phase_diagram import PhaseDiagram, find_phase_diagram
 from poroscan.demix.regime import RegimeReading, read_regime
 from poroscan.demix.simulation_settings import SimulationSettings
@@ -53,6 +53,8 @@ class SimulationResult:
         Fractions at the end, 2-D or 3-D.
     path
         Rows of the path table.
+    demixings
+        First demixing of every shell, from which the regime is read.
     reading
         The regime and what it was read from.
     snapshots
@@ -71,6 +73,7 @@ class SimulationResult:
     polymer: FloatArray
     nonsolvent: FloatArray
     path: tuple[PathRow, ...]
+    demixings: tuple[FirstDemixing, ...]
     reading: RegimeReading
     snapshots: tuple[Snapshot, ...]
     seed: int
@@ -147,7 +150,16 @@ def simulate(
     least = float(min(polymer.min(), nonsolvent.min(), (1 - polymer - nonsolvent).min()))
     reading = read_regime(recorder.rows, recorder.demixings, dimensions=settings.dimensions)
     return SimulationResult(
-        polymer, nonsolvent, tuple(recorder.rows), reading, tuple(snapshots), int(seed), stepper.count, outcome, least
+        polymer=polymer,
+        nonsolvent=nonsolvent,
+        path=tuple(recorder.rows),
+        demixings=tuple(recorder.demixings),
+        reading=reading,
+        snapshots=tuple(snapshots),
+        seed=int(seed),
+        steps=stepper.count,
+        outcome=outcome,
+        least_fraction=least,
     )
 
 
