@@ -123,15 +123,15 @@ def _edges(bottom: npt.NDArray[np.float32], strip: Strip, start: int) -> list[in
     """Rows at which a banner may begin, from the top: a quiet row under rows that are not flat, or a line."""
     last = len(strip.flat) - _MIN_ROWS
     edges = []
-    for row in range(max(1, start - _MAX_GAP), last + 1):
+    for row in range(max(1, start - _MAX_GAP - 3), last + 1):
         if _jumps(strip.flat, row) or _jumps(strip.ground, row) or _is_line(bottom, strip, row):
             edges.append(row)
     return edges
 
 
 def _jumps(share: npt.NDArray[np.float64], row: int) -> bool:
-    """Few flat pixels in the rows above, many from this row on."""
-    above = max(float(np.median(share[max(0, row - n) : row])) for n in (4, 16))  # 16: a thick bar is no picture
+    """Few flat pixels in the rows above (in more of them than a thick bar takes), many from this row on."""
+    above = max(float(np.median(share[max(0, row - 4) : row])), float(np.quantile(share[max(0, row - 24) : row], 0.75)))
     quiet = float(np.median(share[row : row + 4]))
     return quiet >= _QUIET and share[row] >= 0.5 and above <= quiet - 0.35 and share[row - 1] < share[row] - 0.2
 
@@ -142,7 +142,9 @@ def _is_line(bottom: npt.NDArray[np.float32], strip: Strip, row: int) -> bool:
     level = float(np.median(values))
     if abs(level - strip.levels[0]) < 0.12 or float(np.mean(np.abs(values - level) <= 0.1)) < 0.93:
         return False
-    return float(np.mean(np.abs(bottom[row - 1] - level) > 0.1)) > 0.6 and strip.flat[row + 1 : row + 6].max() >= _QUIET
+    return (
+        float(np.mean(np.abs(bottom[row - 1] - level) > 0.1)) > 0.6 and strip.flat[row + 1 : row + 10].max() >= _QUIET
+    )
 
 
 def _is_banner(strip_values: npt.NDArray[np.float32], strip: Strip, *, closed: bool) -> bool:

@@ -27,7 +27,9 @@ def font(size: int, name: str = "DejaVuSans.ttf") -> ImageFont.FreeTypeFont:
     return ImageFont.truetype(str(Path(get_data_path()) / "fonts" / "ttf" / name), size)
 
 
-def texture(rows: int, columns: int, rng: np.random.Generator, *, kind: str = "porous", noise: float = 8.0) -> np.ndarray:
+def texture(
+    rows: int, columns: int, rng: np.random.Generator, *, kind: str = "porous", noise: float = 8.0
+) -> np.ndarray:
     """A grey picture without marks: ``porous`` interior, ``disc`` of it on dark ground, ``black`` ground, ``flat`` grey."""
     smooth = ndimage.gaussian_filter(rng.normal(size=(rows, columns)), 5)
     porous = np.where(smooth < np.quantile(smooth, 0.35), 60.0, 150.0)
@@ -43,7 +45,9 @@ def texture(rows: int, columns: int, rng: np.random.Generator, *, kind: str = "p
     return np.clip(noisy, 0, 255).astype(np.uint8)
 
 
-def draw_bar(draw: ImageDraw.ImageDraw, left: int, row: int, length: int, *, kind: str, ink: int, thick: int = 3, gap=None) -> None:
+def draw_bar(
+    draw: ImageDraw.ImageDraw, left: int, row: int, length: int, *, kind: str, ink: int, thick: int = 3, gap=None
+) -> None:
     """A bar whose outer ends are ``left`` and ``left + length``."""
     right = left + length - 1
     if kind == "dots":
