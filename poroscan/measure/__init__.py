@@ -2,6 +2,13 @@
 
 settings          what a user can choose
 part, shared      what a module hands back; arrays that several need
+porosity          size of the section and its pore share
+bodies            pieces of pore, and bodies where touching pores part
+pore_size         sizes of pore bodies; pore_table has a row for each
+thickness         local thickness of pores and walls; granulometry reads openings off it
+chords, surface   test lines: chord lengths, boundary and surface
+topology          Euler density, connected, open and closed pores
+shape             ISO 9276-6 shape of outlines
 radial            porosity from the outline inwards; skin, polar, elongation are its parts
 two_point         pair counts in any outline; correlation and integral_range sum them up
 lineal, cluster   lineal path, two-point cluster function
@@ -13,18 +20,61 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
-from typing import Any
+from types import MappingProxyType
+from typing import Any, Protocol
 
 import numpy as np
 import numpy.typing as npt
 
-from poroscan.measure import cluster, correlation, lineal, porosity, radial, structure_factor
+from poroscan.measure import (
+    chords,
+    cluster,
+    correlation,
+    granulometry,
+    lineal,
+    pore_size,
+    porosity,
+    radial,
+    shape,
+    structure_factor,
+    surface,
+    thickness,
+    topology,
+)
+from poroscan.measure.part import Part
 from poroscan.measure.settings import MeasureSettings
 from poroscan.measure.shared import Shared
-from poroscan.quantities import PORE_COLUMNS, Curve, Estimate, Record
+from poroscan.quantities import Curve, Estimate, Record
 from poroscan.section import Section
 
+
+class _Measures(Protocol):
+    """A measuring module."""
+
+    def part(
+        self, section: Section, settings: MeasureSettings, *, shared: Shared, rng: np.random.Generator
+    ) -> Part: ...
+
+
 __all__ = ["MeasureSettings", "Measurement", "measure_section"]
+
+
+#: Modules in the order in which they measure, and the shared arrays that nothing needs after each.
+_MODULES: tuple[tuple[_Measures, tuple[str, ...]], ...] = (
+    (porosity, ("wall_distance",)),
+    (surface, ()),
+    (chords, ()),
+    (pore_size, ("pore_distance", "bodies")),
+    (topology, ("_pieces",)),
+    (thickness, ()),
+    (granulometry, ("walls",)),
+    (shape, ()),
+    (radial, ("depth",)),
+    (correlation, ()),
+    (lineal, ()),
+    (cluster, ()),
+    (structure_factor, ()),
+)
 
 
 @dataclass(frozen=True, eq=False)
@@ -59,10 +109,11 @@ def measure_section(
     estimates: dict[str, Estimate] = {}
     flags = dict.fromkeys(section.flags)
     curves: list[Curve] = []
-    for module in (porosity, radial, correlation, lineal, cluster, structure_factor):
+    for module, release in _MODULES:
         part = module.part(section, settings, shared=shared, rng=generator)
         estimates.update(part.estimates)
         curves.extend(part.curves)
         flags.update(dict.fromkeys(part.flags))
-    pores = {name: np.empty(0, dtype=column.dtype) for name, column in PORE_COLUMNS.items()}
-    return Measurement(Record(estimates, tuple(flags)), pores, tuple(curves))
+        shared.release(*release)
+    pores = pore_size.counted(shared.pore_table, settings)
+    return Measurement(Record(estimates, tuple(flags)), MappingProxyType(pores), tuple(curves))

@@ -4,18 +4,26 @@ from __future__ import annotations
 
 import math
 from functools import cached_property
+from typing import Any
 
-import edt
 import numpy as np
 import numpy.typing as npt
 
+from poroscan.measure.bodies import pieces, split_bodies
+from poroscan.measure.distance import boundary_distance, distance_inside
 from poroscan.measure.integral_range import block_inflation
+from poroscan.measure.pore_table import pore_table
 from poroscan.measure.settings import MeasureSettings
+from poroscan.measure.surface import Crossings, count_crossings
+from poroscan.measure.thickness import ThicknessTable, thickness_table
+from poroscan.measure.topology import open_pieces
 from poroscan.measure.two_point import TwoPoint, radial_average, two_point
 from poroscan.section import BoolArray, Section
 
 Float32 = npt.NDArray[np.float32]
 Int32 = npt.NDArray[np.int32]
+
+__all__ = ["Shared", "block_labels", "distance_inside"]
 
 #: A block for resampling is at least this many structure lengths wide (block bootstrap needs about five correlation
 #: lengths; the integral range of a two-phase medium is about (1.6 structure lengths)²).
@@ -62,23 +70,17 @@ class Shared:
     @cached_property
     def depth(self) -> Float32:
         """Distance of every particle pixel from the visible outline; 0 outside, inf where no outline is in sight."""
-        depth = distance_inside(self.section.particle)
-        depth[self.section.particle] -= np.float32(0.5)
-        return depth
+        return boundary_distance(self.section.particle)
 
     @cached_property
     def pore_distance(self) -> Float32:
         """Distance of every pore pixel from the nearest wall or from the outside; 0 elsewhere."""
-        distance = distance_inside(self.section.pores)
-        distance[self.section.pores] -= np.float32(0.5)
-        return distance
+        return boundary_distance(self.section.pores)
 
     @cached_property
     def wall_distance(self) -> Float32:
         """Distance of every wall pixel from the nearest pore or from the outside; 0 elsewhere."""
-        distance = distance_inside(self.walls)
-        distance[self.walls] -= np.float32(0.5)
-        return distance
+        return boundary_distance(self.walls)
 
     @cached_property
     def structure_length(self) -> float:
@@ -113,6 +115,68 @@ class Shared:
         """Size of a table indexed by block label (largest possible label + 1)."""
         return 1 + math.prod(-(-n // self.block_side) for n in self.section.particle.shape)
 
+    def block_at(self, index: tuple[npt.NDArray[np.int64], ...]) -> Int32:
+        """Block of each index, also of indices in a gap of the particle."""
+        code = np.zeros(index[0].shape, dtype=np.int32)
+        for i, n in zip(index, self.section.particle.shape, strict=True):
+            code = code * np.int32(-(-n // self.block_side)) + (i // self.block_side).astype(np.int32)
+        return code + np.int32(1)
+
+    @cached_property
+    def crossings(self) -> Crossings:
+        """Crossings of test lines with pore boundaries, by direction and block."""
+        return count_crossings(self.section.pores, self.section.particle, blocks=self.blocks)
+
+    @cached_property
+    def band_crossings(self) -> tuple[Crossings, Crossings] | None:
+        """Crossings at both ends of the threshold band; None without one or where an end has no boundary."""
+        low, high = self.section.pores_low, self.section.pores_high
+        if low is None or high is None:
+            return None
+        band = count_crossings(low, self.section.particle), count_crossings(high, self.section.particle)
+        return band if all(c.mean_per_length > 0 for c in band) else None
+
+    @cached_property
+    def pore_thickness(self) -> ThicknessTable:
+        """Local thickness of the pores, as a histogram by block."""
+        return thickness_table(self.section.pores, blocks=self.blocks)
+
+    @cached_property
+    def wall_thickness(self) -> ThicknessTable:
+        """Local thickness of the walls, as a histogram by block."""
+        return thickness_table(self.walls, blocks=self.blocks)
+
+    @cached_property
+    def _pieces(self) -> tuple[Int32, int]:
+        return pieces(self.section.pores, diagonal=True)
+
+    @property
+    def pieces(self) -> Int32:
+        """Connected pieces of pore (8 or 26 neighbours), 1…n; 0 elsewhere."""
+        return self._pieces[0]
+
+    @cached_property
+    def piece_sizes(self) -> npt.NDArray[np.int64]:
+        """Pixels of each piece; entry 0 is what is no pore."""
+        return np.bincount(self._pieces[0].ravel(), minlength=self._pieces[1] + 1)
+
+    @cached_property
+    def open_pieces(self) -> BoolArray:
+        """Which pieces reach the outline, indexed by label."""
+        return open_pieces(*self._pieces, self.section.particle)
+
+    @cached_property
+    def bodies(self) -> tuple[Int32, int]:
+        """Pore bodies 1…n (0 elsewhere) and their number."""
+        if self.settings.pore_split == "none":
+            return self._pieces
+        return split_bodies(self.section.pores, self.pore_distance, split_depth=self.settings.split_depth)
+
+    @cached_property
+    def pore_table(self) -> dict[str, npt.NDArray[Any]]:
+        """One row per pore body, small ones included."""
+        return pore_table(self.section, self)
+
     @cached_property
     def two_point(self) -> TwoPoint:
         """Pair counts of the pores inside the outline, up to the largest lag of the settings."""
@@ -139,28 +203,6 @@ class Shared:
             if not isinstance(getattr(type(self), name, None), cached_property):
                 raise ValueError(f"Shared has no lazily computed array {name!r}")
             self.__dict__.pop(name, None)
-
-
-def distance_inside(mask: BoolArray) -> Float32:
-    """Euclidean distance of every True pixel to the nearest False pixel centre; the array border is no boundary.
-
-    Parameters
-    ----------
-    mask
-        bool array, 2-D or 3-D.
-
-    Returns
-    -------
-    float32 array; 0 on False pixels and inf everywhere inside where no pixel is False.
-
-    References
-    ----------
-    Felzenszwalb and Huttenlocher, Theory of Computing 8 (2012) 415 (the separable exact transform).
-    """
-    if mask.all():
-        return np.full(mask.shape, np.inf, dtype=np.float32)
-    distance: Float32 = edt.edt(np.ascontiguousarray(mask), black_border=False, parallel=1)
-    return distance
 
 
 def block_labels(particle: BoolArray, side: int) -> Int32:

@@ -27,13 +27,23 @@ look-up tables). Felzenszwalb and Huttenlocher, Theory of Computing 8 (2012) 415
 from __future__ import annotations
 
 import itertools
+import math
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
 
 import edt
 import numba
 import numpy as np
 import numpy.typing as npt
 
-from poroscan.section import BoolArray
+from poroscan.measure.part import Part, undefined
+from poroscan.measure.settings import MeasureSettings
+from poroscan.measure.uncertainty import block_quantile, block_ratio, estimate_of, threshold_sd
+from poroscan.quantities import Curve, Estimate
+from poroscan.section import BoolArray, Section
+
+if TYPE_CHECKING:
+    from poroscan.measure.shared import Shared
 
 Float32 = npt.NDArray[np.float32]
 Int32 = npt.NDArray[np.int32]
@@ -115,6 +125,45 @@ def squared_thickness(phase: BoolArray) -> Int32:
     root = np.sqrt(np.arange(largest + 1)).astype(np.int32)
     _paint(squared, order, squared.ravel()[order], root, _disc_words(min(largest, _SMALL), root))
     return squared.reshape(phase.shape)
+
+
+@dataclass(frozen=True, eq=False)
+class ThicknessTable:
+    """Pixels by block and local thickness.
+
+    Parameters
+    ----------
+    diameters
+        Distinct local thicknesses in pixels, ascending.
+    counts
+        Pixels of each block (0…n) that have each of them.
+    ndim
+        2 or 3.
+    """
+
+    diameters: npt.NDArray[np.float64]
+    counts: npt.NDArray[np.float64]
+    ndim: int
+
+    @property
+    def totals(self) -> npt.NDArray[np.float64]:
+        """Pixels of each thickness, all blocks together."""
+        return np.asarray(self.counts.sum(axis=0))
+
+
+def thickness_table(phase: BoolArray, *, blocks: Int32 | None = None) -> ThicknessTable:
+    """Histogram of the local thickness of a phase by block; empty where the phase is empty or nothing bounds it."""
+    n = 1 if blocks is None else int(blocks.max(initial=0)) + 1
+    squared = squared_thickness(phase)
+    found = np.bincount(squared[phase]) if phase.any() and not phase.all() else np.zeros(0, dtype=np.int64)
+    values = np.flatnonzero(found)
+    rank = np.zeros(found.size, dtype=np.int32)
+    rank[values] = np.arange(values.size)
+    code = rank[squared[phase]] if values.size else np.zeros(0, dtype=np.int32)
+    if blocks is not None and values.size:
+        code = code + blocks[phase] * np.int32(values.size)
+    counts = np.bincount(code, minlength=n * values.size).reshape(n, values.size)
+    return ThicknessTable(2.0 * np.sqrt(values) - 1.0, counts.astype(np.float64), phase.ndim)
 
 
 def containment_tables(largest: int, *, steps: Int32) -> Int32:
@@ -345,3 +394,63 @@ def _disc_word(rest, y0, x0, root):  # type: ignore[no-untyped-def]
             if first <= last:
                 word |= np.uint64((2 << last) - (1 << first)) << np.uint64(8 * j)
     return word
+
+
+_STATISTICS = ("d10", "d50", "d90", "span", "mean", "d50_number", "mean_number", "max")
+
+
+def part(section: Section, settings: MeasureSettings, *, shared: Shared, rng: np.random.Generator) -> Part:
+    """Local thickness of pores and walls; curves local_thickness_pores and local_thickness_walls."""
+    estimates: dict[str, Estimate] = {}
+    curves = []
+    for base, name, table in (("thickness", "pores", shared.pore_thickness), ("wall", "walls", shared.wall_thickness)):
+        if table.totals.sum() == 0:
+            estimates |= dict(undefined([f"{base}_{statistic}" for statistic in _STATISTICS]).estimates)
+            continue
+        sd = _threshold(section, walls=base == "wall")
+        estimates |= {f"{base}_{k}": e for k, e in _statistics(table, shared.block_inflation, sd).items()}
+        curves.append(_curve(f"local_thickness_{name}", table))
+    return Part(estimates, tuple(curves))
+
+
+def _statistics(table: ThicknessTable, inflation: float, median_sd: float | None) -> dict[str, Estimate]:
+    d, counts = table.diameters, table.counts
+    block, column = np.nonzero(counts)
+    weight = counts[block, column]
+    out: dict[str, Estimate] = {}
+    for name, q in (("d10", 0.1), ("d50", 0.5), ("d90", 0.9)):
+        result = block_quantile(d[column], weight, block, q=q, inflation=inflation)
+        out[name] = estimate_of(result, threshold=median_sd if name == "d50" else None, scale="log")
+    out["span"] = Estimate((out["d90"].value - out["d10"].value) / out["d50"].value)
+    mean = block_ratio((counts @ d)[1:], counts.sum(axis=1)[1:], inflation=inflation, scale="log")
+    out["mean"] = estimate_of(mean, scale="log")
+    each = d**-table.ndim
+    median = block_quantile(d[column], weight * each[column], block, q=0.5, inflation=inflation)
+    out["d50_number"] = estimate_of(median, scale="log")
+    mean = block_ratio((counts @ (d * each))[1:], (counts @ each)[1:], inflation=inflation, scale="log")
+    out["mean_number"] = estimate_of(mean, scale="log")
+    out["max"] = Estimate(float(d[-1]))
+    return out
+
+
+def _threshold(section: Section, *, walls: bool) -> float | None:
+    """Threshold component of the median: half the distance of the medians at both ends of the band."""
+    medians = []
+    for pores in (section.pores_low, section.pores_high):
+        if pores is None:
+            return None
+        phase = section.particle & ~pores if walls else pores
+        table = thickness_table(phase)
+        total = table.totals
+        if total.sum() == 0:
+            return None
+        medians.append(float(np.interp(0.5, (np.cumsum(total) - total / 2.0) / total.sum(), table.diameters)))
+    return threshold_sd(*medians)
+
+
+def _curve(name: str, table: ThicknessTable) -> Curve:
+    """Share of the phase where the local thickness is at most x, on 64 even steps."""
+    x = np.linspace(0.0, math.ceil(float(table.diameters[-1])), 65)
+    share = np.concatenate([[0.0], np.cumsum(table.totals) / table.totals.sum()])
+    unknown = np.full(x.size, np.nan)
+    return Curve(name, x, share[np.searchsorted(table.diameters, x, side="right")], unknown, unknown)
