@@ -203,7 +203,7 @@ def test_sixty_rendered_particles(tmp_path: Path) -> None:
 @pytest.mark.parametrize("look", HARD_LOOKS)
 def test_hard_looks(look: str, tmp_path: Path) -> None:
     """Pores brighter than the wall, pores full of resin, charging bands, ground as rough and nearly as grey as the wall."""
-    cases = [draw_case(100 + k, kinds=SKINNED, looks=(look,), particles=2) for k in range(3)]
+    cases = [draw_case(100 + k, kinds=SKINNED, looks=(look,), particles=2) for k in range(2)]
     outcome = run_cases(cases, tmp_path)
     print(f"\n{look}\n" + table(outcome.rows))
     assert outcome.missed == outcome.invented == ()
@@ -214,7 +214,7 @@ def test_hard_looks(look: str, tmp_path: Path) -> None:
 @pytest.mark.slow
 def test_cut_faces_of_volumes(tmp_path: Path) -> None:
     """Pores seen into, down to the material that truly lies below."""
-    cases = [draw_case(200 + k, kinds=VOLUMES, particles=2) for k in range(5)]
+    cases = [draw_case(200 + k, kinds=VOLUMES, particles=2) for k in range(4)]
     outcome = run_cases(cases, tmp_path)
     print("\n" + table(outcome.rows))
     assert outcome.missed == outcome.invented == ()
