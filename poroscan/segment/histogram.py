@@ -37,6 +37,8 @@ class Levels:
     limit
         Lower limit of the material: the grey value at which a pixel is as likely pore as material; NaN where nothing lies
         below the material.
+    valley
+        Grey value between pore and material at which flat pixels are rarest; halfway where many are as rare. NaN with ``pore``.
     excess
         Fraction of pixels below the material that its own spread does not explain.
     """
@@ -44,6 +46,7 @@ class Levels:
     material: float
     spread: float
     pore: float
+    valley: float
     limit: float
     excess: float
 
@@ -86,14 +89,15 @@ def find_levels(grey: Float32, inside: BoolArray, *, residual_noise: float, hint
     values = grey[inside]
     low, high = float(values.min()), float(values.max())
     if high - low < 1e-6:
-        return Levels(low, 0.0, math.nan, math.nan, 0.0)
+        return Levels(low, 0.0, math.nan, math.nan, math.nan, 0.0)
     histogram = _histogram(grey, inside, low, high, residual_noise)
     peak = _material_peak(histogram, hint)
     material = float(histogram.centres[peak])
     spread = max(_spread(histogram.every, peak) * histogram.width, residual_noise, 1e-6)
     limit, excess = _limit(histogram, peak, spread)
     pore = _pore_mode(histogram, material, limit) if math.isfinite(limit) else math.nan
-    return Levels(material, spread, pore, limit, excess)
+    valley = _valley(histogram, pore, material) if math.isfinite(pore) else math.nan
+    return Levels(material, spread, pore, valley, limit, excess)
 
 
 def _histogram(grey: Float32, inside: BoolArray, low: float, high: float, noise: float) -> _Histogram:
@@ -189,6 +193,21 @@ def _stands_apart(histogram: _Histogram, level: float, material: float) -> bool:
         return False
     gap, mode = histogram.flat[(x >= 0.35) & (x < 0.65)], histogram.flat[np.abs(x) <= 0.15]
     return gap.size > 0 and float(gap.mean()) < 0.4 * float(mode.mean())
+
+
+def _valley(histogram: _Histogram, level: float, material: float) -> float:
+    """Grey value of least density between the modes, drawn to the middle where the density does not say.
+
+    The density of flat pixels, smoothed over a tenth of the contrast and relative to the pores' mode, plus 0.05 times the squared
+    relative distance from the middle, is least there.
+    """
+    x = (histogram.centres - level) / (material - level)
+    inside = (x >= 0.25) & (x <= 0.75)
+    bins = (material - level) / histogram.width
+    density = ndimage.gaussian_filter1d(histogram.flat, max(0.05 * bins, 1.0))
+    density = density / max(float(density[np.abs(x) <= 0.15].max()), 1e-9)
+    cost = density[inside] + 0.05 * (4.0 * (x[inside] - 0.5)) ** 2
+    return float(histogram.centres[inside][int(np.argmin(cost))])
 
 
 def bright_share(grey: FloatArray, inside: BoolArray, levels: Levels) -> float:

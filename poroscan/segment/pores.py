@@ -77,13 +77,15 @@ def auto(inside: Inside, settings: SegmentSettings) -> Pores:
     if not math.isfinite(levels.limit):
         return _none(inside, "nothing darker than the material", ("no_pores",))
     if math.isfinite(levels.pore):
-        level = 0.5 * (levels.pore + levels.material)
-        method = "half-way between the modes of pore and material"
+        level = levels.valley
+        contrast = levels.material - levels.pore
+        other = abs(level - 0.5 * (levels.pore + levels.material)) / math.sqrt(3.0)
+        uncertainty = math.hypot(0.04 * contrast, other, inside.noise)
+        method = "between the modes of pore and material"
     else:
         level = levels.limit
+        uncertainty = math.hypot(0.5 * levels.spread, inside.noise)
         method = "lower limit of the material's grey values"
-    spread = abs(levels.limit - level) / math.sqrt(3.0) if math.isfinite(levels.pore) else 0.35 * levels.spread
-    uncertainty = math.hypot(min(spread, 0.1 * (levels.material - level)), 0.25 * inside.noise)
     shrink = math.isfinite(levels.pore)
     return _banded(inside, settings, lambda s: inside.grey < level + s, level, uncertainty, method, shrink=shrink)
 
@@ -175,13 +177,20 @@ REACH = 3
 
 
 def _half_height(inside: Inside) -> Float32:
-    """Midway between the darkest and the brightest grey value within ``REACH`` pixels, inside the outline only."""
+    """Midway between the darkest and the brightest grey value within ``REACH`` pixels, inside the outline only.
+
+    Where pores have a level, the bright side counts up to half the contrast above the material (an edge, not a foreign grain),
+    and slopes of less than half the contrast get NaN: they are no borders of pores.
+    """
     size = 2 * REACH + 1
-    top = ndimage.maximum_filter(np.where(inside.mask, inside.grey, np.float32(-np.inf)), size)
-    bottom = ndimage.minimum_filter(np.where(inside.mask, inside.grey, np.float32(np.inf)), size)
-    middle = np.zeros_like(inside.grey)
-    np.add(top, bottom, out=middle, where=inside.mask)
-    return middle * np.float32(0.5)
+    top = ndimage.maximum_filter(np.where(inside.mask, inside.grey, np.float32(-9)), size)
+    bottom = ndimage.minimum_filter(np.where(inside.mask, inside.grey, np.float32(9)), size)
+    levels = inside.levels
+    if not math.isfinite(levels.pore):
+        return np.float32(0.5) * (top + bottom)
+    contrast = levels.material - levels.pore
+    np.minimum(top, np.float32(levels.material + 0.5 * contrast), out=top)
+    return np.where(top - bottom > 0.5 * contrast, np.float32(0.5) * (top + bottom), np.float32(np.nan))
 
 
 def _on_the_slope(pores: BoolArray, inside: Inside, middle: Float32, *, shrink: bool) -> BoolArray:
@@ -192,7 +201,7 @@ def _on_the_slope(pores: BoolArray, inside: Inside, middle: Float32, *, shrink: 
     """
     wall = inside.mask & ~pores
     near = ndimage.binary_dilation(pores, iterations=2) & ndimage.binary_dilation(wall, iterations=2) & inside.mask
-    moved = np.where(near, inside.grey < middle, pores)
+    moved = np.where(near & ~np.isnan(middle), inside.grey < middle, pores)
     return moved if shrink else moved | pores
 
 
