@@ -17,6 +17,7 @@ Padfield, IEEE Trans. Image Process. 21 (2012) 2706 (masked correlation by Fouri
 from __future__ import annotations
 
 import math
+from collections.abc import Iterator
 from dataclasses import dataclass
 
 import numpy as np
@@ -25,6 +26,7 @@ import scipy.fft
 
 BoolArray = npt.NDArray[np.bool_]
 Float = npt.NDArray[np.float64]
+Counts = npt.NDArray[np.int32] | npt.NDArray[np.int64]
 
 #: Columns of the spectrum handled at a time: bounds the working memory, and is wide enough for vector instructions.
 _CHUNK = 64
@@ -37,14 +39,14 @@ class TwoPoint:
     Parameters
     ----------
     hits, pairs
-        int64 arrays: pore–pore pairs and all pairs inside the outline. Lags run from −n to +n along every axis but the last but
+        Integer arrays: pore–pore pairs and all pairs inside the outline. Lags run from −n to +n along every axis but the last but
         one, where they run from 0 to n (S2(−h) = S2(h)).
     reach
         The largest lag n along each axis.
     """
 
-    hits: npt.NDArray[np.int64]
-    pairs: npt.NDArray[np.int64]
+    hits: Counts
+    pairs: Counts
     reach: tuple[int, ...]
 
     @property
@@ -63,7 +65,7 @@ class TwoPoint:
         """S2 at every lag; NaN where no pair of points is that far apart."""
         return _ratio(self.hits, self.pairs)
 
-    def axis(self, axis: int) -> tuple[Float, npt.NDArray[np.int64]]:
+    def axis(self, axis: int) -> tuple[Float, Counts]:
         """S2 and pair counts along one array axis, lags 0…reach[axis]."""
         index: list[int | slice] = list(self.zero)
         index[axis] = slice(self.zero[axis], None)
@@ -76,14 +78,14 @@ class TwoPoint:
         shape[half] = self.reach[half] + 1
         return np.where(np.arange(shape[half]) == 0, 1, 2).reshape(shape).astype(np.int64)
 
+    def lags(self) -> list[Float]:
+        """Lags along each axis, in the layout of ``hits``."""
+        half = len(self.reach) - 2
+        return [np.arange(0 if a == half else -n, n + 1, dtype=np.float64) for a, n in enumerate(self.reach)]
+
     def distance(self) -> Float:
         """Length of every lag in pixels, in the layout of ``hits``."""
-        half = len(self.reach) - 2
-        axes = [np.arange(0 if a == half else -n, n + 1, dtype=np.float64) for a, n in enumerate(self.reach)]
-        square: Float = np.zeros((1,) * len(axes))
-        for a, lags in enumerate(axes):
-            square = square + (lags**2).reshape([-1 if b == a else 1 for b in range(len(axes))])
-        return np.sqrt(square, out=square)
+        return np.sqrt(_outer_sum([np.square(lags) for lags in self.lags()]))
 
 
 @dataclass(frozen=True, eq=False)
@@ -156,14 +158,18 @@ def radial_average(counts: TwoPoint, *, max_lag: float | None = None) -> RadialC
     """
     wide = [n for n in counts.reach if n > 0] or [0]
     top = min(wide) if max_lag is None else min(int(max_lag), min(wide))
-    distance = counts.distance()
-    ring = np.rint(distance).astype(np.intp)
-    np.minimum(ring, top + 1, out=ring)
-    weight = counts.multiplicity()
-    pairs = np.bincount(ring.ravel(), (counts.pairs * weight).ravel(), top + 2)[:-1].astype(np.float64)
-    hits = np.bincount(ring.ravel(), (counts.hits * weight).ravel(), top + 2)[:-1]
-    distance *= counts.pairs * weight
-    length = np.bincount(ring.ravel(), distance.ravel(), top + 2)[:-1]
+    sums = np.zeros((3, top + 2))
+    weight = np.broadcast_to(counts.multiplicity(), counts.pairs.shape)
+    square = [np.square(lags) for lags in counts.lags()]
+    for slab in _slabs(counts.pairs.shape[0], counts.pairs[0].size):
+        distance = np.sqrt(_outer_sum([square[0][slab], *square[1:]]))
+        ring = np.minimum(np.rint(distance).astype(np.intp), top + 1).ravel()
+        pairs = (counts.pairs[slab] * weight[slab]).astype(np.float64)
+        sums[0] += np.bincount(ring, pairs.ravel(), top + 2)
+        sums[1] += np.bincount(ring, (counts.hits[slab] * weight[slab]).ravel(), top + 2)
+        distance *= pairs
+        sums[2] += np.bincount(ring, distance.ravel(), top + 2)
+    pairs, hits, length = sums[:, :-1]
     return RadialCorrelation(_ratio(length, pairs), _ratio(hits, pairs), pairs)
 
 
@@ -199,27 +205,42 @@ def check_masks(pores: BoolArray, particle: BoolArray) -> None:
         raise ValueError("pores has pixels outside particle (use pores & particle)")
 
 
-def _autocorrelation(mask: BoolArray, *, reach: tuple[int, ...], size: tuple[int, ...]) -> npt.NDArray[np.int64]:
-    """Σ_x m(x) m(x+h) as whole numbers for the lags of ``reach``, in the layout of TwoPoint."""
+def _autocorrelation(mask: BoolArray, *, reach: tuple[int, ...], size: tuple[int, ...]) -> Counts:
+    """Σ_x m(x) m(x+h) as whole numbers for the lags of ``reach``, in the layout of TwoPoint.
+
+    Everything runs in slabs, and the lags overwrite the spectrum where they fit, so that the spectrum of the rows is the
+    only large array.
+    """
     last = mask.ndim - 1
     others = tuple(range(last))
-    rows = scipy.fft.rfft(mask.astype(np.float64), n=size[-1], axis=last)
+    rows = np.empty((*mask.shape[:-1], size[-1] // 2 + 1), np.complex128)
+    for slab in _slabs(mask.shape[0], rows[0].size):
+        rows[slab] = scipy.fft.rfft(mask[slab].astype(np.float64), n=size[-1], axis=last)
     lags = tuple(n + 1 if a == last - 1 else 2 * n + 1 for a, n in enumerate(reach[:-1]))
-    half = np.empty((*lags, rows.shape[-1]), np.complex128)
+    fits = all(n <= m for n, m in zip(lags, mask.shape[:-1], strict=True))
+    half = rows[tuple(slice(n) for n in lags)] if fits else np.empty((*lags, rows.shape[-1]), np.complex128)
     for start in range(0, rows.shape[-1], _CHUNK):
         chunk = slice(start, start + _CHUNK)
         spectrum = scipy.fft.fftn(np.ascontiguousarray(rows[..., chunk]), s=size[:-1], axes=others, overwrite_x=True)
         power = np.square(spectrum.real)
         power += np.square(spectrum.imag)
         # The inverse of a real spectrum is the conjugate of its forward real transform.
-        half[..., chunk] = _keep(scipy.fft.rfftn(power, axes=others), reach)
-    del rows
-    half /= math.prod(size[:-1])
-    np.conjugate(half, out=half)
-    full = scipy.fft.irfft(half, n=size[-1], axis=last, overwrite_x=True)
+        half[..., chunk] = np.conjugate(_keep(scipy.fft.rfftn(power, axes=others), reach))
     n = reach[-1]
-    kept = np.concatenate([full[..., full.shape[-1] - n :], full[..., : n + 1]], axis=last)
-    return np.rint(kept, out=kept).astype(np.int64)
+    out = np.empty((*lags, 2 * n + 1), np.int32 if mask.size < 2**30 else np.int64)
+    for slab in _slabs(lags[0], half[0].size):
+        full = scipy.fft.irfft(half[slab], n=size[-1], axis=last)
+        full /= math.prod(size[:-1])
+        np.rint(full, out=full)
+        out[slab][..., n:] = full[..., : n + 1]
+        out[slab][..., :n] = full[..., full.shape[-1] - n :]
+    return out
+
+
+def _slabs(length: int, each: int) -> Iterator[slice]:
+    """Slices of the first axis with about a quarter of a million numbers each."""
+    step = max(1, 2**18 // max(each, 1))
+    return (slice(start, min(start + step, length)) for start in range(0, length, step))
 
 
 def _keep(spectrum: npt.NDArray[np.complex128], reach: tuple[int, ...]) -> npt.NDArray[np.complex128]:
@@ -229,6 +250,14 @@ def _keep(spectrum: npt.NDArray[np.complex128], reach: tuple[int, ...]) -> npt.N
     n, m = reach[0], reach[1]
     planes = spectrum.shape[0]
     return np.concatenate([spectrum[planes - n :, : m + 1], spectrum[: n + 1, : m + 1]])
+
+
+def _outer_sum(axes: list[Float]) -> Float:
+    """Sum of one value per axis at every point of the grid."""
+    out: Float = np.zeros((1,) * len(axes))
+    for a, values in enumerate(axes):
+        out = out + values.reshape([-1 if b == a else 1 for b in range(len(axes))])
+    return out
 
 
 def _trim(pores: BoolArray, particle: BoolArray) -> tuple[BoolArray, BoolArray]:
