@@ -36,6 +36,8 @@ _PUBLIC = {
     "load_formulation": "poroscan.demix.formulation",
     "Mixture": "poroscan.demix.mixture",
     "find_phase_diagram": "poroscan.demix.phase_diagram",
+    "RenderSettings": "poroscan.render.settings",
+    "render_section": "poroscan.render.sem",
 }
 
 __all__ = ["__version__", *_PUBLIC]
