@@ -48,6 +48,12 @@ class StokesFlow:
             for q, f in zip(self._q, spectra, strict=True)
         ]
 
+    def pressure(self, force: Sequence[FloatArray]) -> FloatArray:
+        """Pressure that balances the part of the force that drives no flow, ∇²P = ∇·F; its mean is 0."""
+        spectra = [fft.rfftn(f, workers=1) for f in force]
+        along = sum(q * f for q, f in zip(self._q, spectra, strict=True)) * self._direction
+        return np.asarray(fft.irfftn(-1j * along, s=self._shape, workers=1))
+
     def advection(self, fields: Sequence[FloatArray], kappa: Sequence[float]) -> list[FloatArray]:
         """−∇·(φv) of every field under its own capillary force; conservative central differences."""
         velocity = self.velocity(capillary_force(fields, kappa))

@@ -29,15 +29,15 @@ def wrap(field):  # type: ignore[no-untyped-def]
 def potentials(p, n, par, off_rows, off_weights, cells, buf):  # type: ignore[no-untyped-def]
     """Cell values needed by the fluxes, into ``cells``: exchange potentials without their ideal part (interaction and
     gradient energy) of polymer and of non-solvent against solvent; square root of the arrest factor times the polymer's
-    mobility; square roots of the three fractions (0 where a fraction is negative).
+    mobility; the three fractions, at least ``tiny`` (the caller takes their logarithms, which numpy has vectorised).
     """
-    e_p, e_n, slow, q_p, q_n, q_s = cells
+    e_p, e_n, slow, c_p, c_n, c_s = cells
     rows, columns = p.shape[0], p.shape[1] - 2
     x_sn, x_pn, x_ps = par[0], par[1], par[2]
     k_p, k_n = par[6], par[7]
     m_p, g_frac, g_width, floor = par[8], par[9], par[10], par[11]
     one, zero = par.dtype.type(1), par.dtype.type(0)
-    top, shrink, half = par[12], par[13], par[14]
+    top, shrink, half, tiny = par[12], par[13], par[14], par[17]
     for r in range(rows):
         for j in range(1, columns + 1):
             buf[0, j] = zero
@@ -65,9 +65,9 @@ def potentials(p, n, par, off_rows, off_weights, cells, buf):  # type: ignore[no
             x *= x
             x *= x
             slow[r, j] = np.sqrt(m_p * (floor + (one - floor) / (one + x)))
-            q_p[r, j] = np.sqrt(max(vp, zero))
-            q_n[r, j] = np.sqrt(max(vn, zero))
-            q_s[r, j] = np.sqrt(max(vs, zero))
+            c_p[r, j] = max(vp, tiny)
+            c_n[r, j] = max(vn, tiny)
+            c_s[r, j] = max(vs, tiny)
     for a in cells:
         for r in range(rows):
             a[r, 0] = a[r, columns]
@@ -105,20 +105,23 @@ def _link(
 ):  # type: ignore[no-untyped-def]
     """Flux of polymer and non-solvent over one kind of link for one row: the formulas are in docs/simulation.md.
 
-    The mean fraction of a link is 6g(3g + t)/(28g + t) with g = √(φφ'), t = φ + φ': the logarithmic mean to sixth order, and 0
-    where either fraction is 0. With it the difference of fractions is mean × difference of logarithms, and no logarithm
-    is needed.
+    The mean fraction of a link is the logarithmic mean (φ' − φ)/(ln φ' − ln φ), by its series where the two are near. With it
+    mean × difference of logarithms is the difference of fractions: the ideal part of the flux needs no logarithm, cannot
+    blow up where a component is absent, and yet the whole is mobility × difference of potentials, so that energy falls.
     """
-    one, tiny, three, six, many = c
+    one, half, tiny, near, c_1, c_2, c_3 = c
     for j in range(f_p.size):
         s0, s1 = one - p0[j] - n0[j], one - p1[j] - n1[j]
         dp, dn, ds = (p1[j] - p0[j]) * i_p, (n1[j] - n0[j]) * i_n, (s1 - s0) * i_s
-        g, t = x0[j] * x1[j], p0[j] + p1[j]
-        l_p = six * g * (three * g + t) / max(many * g + t, tiny)
-        g, t = y0[j] * y1[j], n0[j] + n1[j]
-        l_n = six * g * (three * g + t) / max(many * g + t, tiny)
-        g, t = z0[j] * z1[j], s0 + s1
-        l_s = six * g * (three * g + t) / max(many * g + t, tiny)
+        u, v, d = max(p0[j], tiny), max(p1[j], tiny), x1[j] - x0[j]
+        w = d * d
+        l_p = (v - u) / d if w > near else half * (u + v) * (one - w * (c_1 - w * (c_2 - w * c_3)))
+        u, v, d = max(n0[j], tiny), max(n1[j], tiny), y1[j] - y0[j]
+        w = d * d
+        l_n = (v - u) / d if w > near else half * (u + v) * (one - w * (c_1 - w * (c_2 - w * c_3)))
+        u, v, d = max(s0, tiny), max(s1, tiny), z1[j] - z0[j]
+        w = d * d
+        l_s = (v - u) / d if w > near else half * (u + v) * (one - w * (c_1 - w * (c_2 - w * c_3)))
         de_p, de_n = ep1[j] - ep0[j], en1[j] - en0[j]
         a = a0[j] * a1[j]
         m_pn, m_ps, m_ns = l_p * l_n, l_p * l_s, l_n * l_s
@@ -132,16 +135,19 @@ def _link(
 @njit(**_FAST)
 def _link_still(p0, p1, n0, n1, ep0, ep1, en0, en1, a0, a1, x0, x1, y0, y1, z0, z1, i_p, i_s, i_n, weight, c, f_p, f_n):  # type: ignore[no-untyped-def]
     """The same without thermal flux."""
-    one, tiny, three, six, many = c
+    one, half, tiny, near, c_1, c_2, c_3 = c
     for j in range(f_p.size):
         s0, s1 = one - p0[j] - n0[j], one - p1[j] - n1[j]
         dp, dn, ds = (p1[j] - p0[j]) * i_p, (n1[j] - n0[j]) * i_n, (s1 - s0) * i_s
-        g, t = x0[j] * x1[j], p0[j] + p1[j]
-        l_p = six * g * (three * g + t) / max(many * g + t, tiny)
-        g, t = y0[j] * y1[j], n0[j] + n1[j]
-        l_n = six * g * (three * g + t) / max(many * g + t, tiny)
-        g, t = z0[j] * z1[j], s0 + s1
-        l_s = six * g * (three * g + t) / max(many * g + t, tiny)
+        u, v, d = max(p0[j], tiny), max(p1[j], tiny), x1[j] - x0[j]
+        w = d * d
+        l_p = (v - u) / d if w > near else half * (u + v) * (one - w * (c_1 - w * (c_2 - w * c_3)))
+        u, v, d = max(n0[j], tiny), max(n1[j], tiny), y1[j] - y0[j]
+        w = d * d
+        l_n = (v - u) / d if w > near else half * (u + v) * (one - w * (c_1 - w * (c_2 - w * c_3)))
+        u, v, d = max(s0, tiny), max(s1, tiny), z1[j] - z0[j]
+        w = d * d
+        l_s = (v - u) / d if w > near else half * (u + v) * (one - w * (c_1 - w * (c_2 - w * c_3)))
         de_p, de_n = ep1[j] - ep0[j], en1[j] - en0[j]
         a = a0[j] * a1[j]
         g_pn = a * (l_n * dp - l_p * dn + l_p * l_n * (de_p - de_n))
@@ -178,7 +184,7 @@ def rates(p, n, cells, par, links, shifts, weights, noise, key0, key1, out_p, ou
     rows, columns = p.shape[0], p.shape[1] - 2
     i_p, i_s, i_n = par[3], par[4], par[5]
     one, zero = par.dtype.type(1), par.dtype.type(0)
-    c = (one, par[17], par[18], par[19], par[20])
+    c = (one, par[14], par[17], par[18], par[19], par[20], par[21])
     middle, unit = par[15], par[16]
     for r in range(rows):
         for j in range(columns + 2):

@@ -25,6 +25,8 @@ from poroscan.errors import SettingsError, SimulationError
 
 FloatArray = npt.NDArray[np.floating]
 
+#: Fractions below this count as this in logarithms.
+_TINY = 1e-12
 #: Halvings of the longest step before a run is given up.
 _HALVINGS = 14
 
@@ -87,7 +89,7 @@ class Stepper:
         if self.settings.viscosity is not None:
             self._flow = StokesFlow(self._shape, self.settings.viscosity, dtype)
         self.step_length = self.step_length or self.settings.max_step / 8
-        self._refresh()
+        del self.polymer, self.nonsolvent  # the padded arrays hold the state from here on
 
     @staticmethod
     def _padded(array: FloatArray, rows: int, columns: int, dtype: np.dtype) -> FloatArray:
@@ -96,13 +98,24 @@ class Stepper:
         kernels.wrap(padded)
         return padded
 
-    def _refresh(self) -> None:
-        self.polymer = self._p[:, 1:-1].reshape(self._shape)
-        self.nonsolvent = self._n[:, 1:-1].reshape(self._shape)
-
     def fields(self) -> tuple[FloatArray, FloatArray]:
         """Copies of polymer and non-solvent fractions."""
         return self._inner(self._p).copy(), self._inner(self._n).copy()
+
+    def restart(self, polymer: FloatArray, nonsolvent: FloatArray) -> None:
+        """Go on from other fields of the same shape, with the clock as it is.
+
+        Raises
+        ------
+        ValueError
+            If a field is not of the shape of the box, not finite, or no fraction.
+        """
+        _check_fields(polymer, nonsolvent)
+        if polymer.shape != self._shape:
+            raise ValueError(f"polymer must have the shape of the box, {self._shape}, not {polymer.shape}")
+        for padded, field in ((self._p, polymer), (self._n, nonsolvent)):
+            self._inner(padded)[...] = field
+            kernels.wrap(padded)
 
     def _inner(self, padded: FloatArray) -> FloatArray:
         return padded.reshape((*self._shape[:-1], self._shape[-1] + 2))[..., 1:-1]
@@ -111,6 +124,8 @@ class Stepper:
         """Rate of change of both fields (thermal flux for a step of length dt included), views of shape ``shape``."""
         p, n, cells, table = self._p, self._n, self._cells, self._lattice
         kernels.potentials(p, n, self._par, table.offsets, self._coefficients, cells, self._buffer)
+        for cell in cells[3:]:
+            np.log(cell, out=cell)
         noise = self._par.dtype.type(np.sqrt(2 * self.settings.noise / dt))
         key0, key1 = noise_keys(self.seed, self.count)
         kernels.rates(
@@ -178,9 +193,10 @@ class Stepper:
 
     def _choose(self, length: float, largest: float, limit: float) -> None:
         """Next step: halved when fractions moved too far, doubled when there is room; powers of two keep the tables few."""
+        room = limit - 0.6 * self.settings.max_change  # noise alone never holds the step back
         if largest > limit:
             length /= 2
-        elif largest < 0.4 * limit:
+        elif largest < room:
             length = min(2 * length, self.settings.max_step)
         self.step_length = length
 
@@ -219,7 +235,7 @@ def _parameters(mixture: Mixture, settings: SimulationSettings, dtype: np.dtype)
         [
             mixture.chi_sn, mixture.chi_pn, mixture.chi_ps, 1 / mixture.N_p, 1 / mixture.N_s, 1 / mixture.N_n,
             settings.kappa_polymer, settings.kappa_nonsolvent, settings.polymer_mobility, settings.arrest_fraction,
-            1 / settings.arrest_width, settings.arrest_floor, 14.0, 1 / 64, 0.5, 511.5, np.sqrt(12 / (1024**2 - 1)), 1e-30, 3, 6, 28,
+            1 / settings.arrest_width, settings.arrest_floor, 14.0, 1 / 64, 0.5, 511.5, np.sqrt(12 / (1024**2 - 1)), _TINY, 0.25, 1 / 12, 1 / 120, 17 / 20160,
         ],
         dtype,
     )  # fmt: skip

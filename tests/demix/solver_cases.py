@@ -79,6 +79,5 @@ def slow_rates(mixture, settings, p, n):
 
 
 def link_mean(x, y):
-    """Nearly the logarithmic mean of two positive arrays (test_mean_is_logarithmic says how nearly)."""
-    g, t = np.sqrt(x * y), x + y
-    return 6 * g * (3 * g + t) / (28 * g + t)
+    """Logarithmic mean of two positive arrays that differ."""
+    return (y - x) / (np.log(y) - np.log(x))

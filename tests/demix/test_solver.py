@@ -6,7 +6,7 @@ from dataclasses import replace
 
 import numpy as np
 import pytest
-from solver_cases import BINARY, TERNARY, link_mean, links, quiet_settings, slow_laplacian, slow_rates
+from solver_cases import BINARY, TERNARY, links, quiet_settings, slow_laplacian, slow_rates
 
 from poroscan.demix.lattice import lattice
 from poroscan.demix.stability import arrest, hessian_matrix, implicit_rates, mobility
@@ -36,14 +36,6 @@ def test_rates_equal_slow_version(shape, rng):
         np.testing.assert_allclose(got, slow, rtol=0, atol=3e-6 * np.abs(slow).max())
 
 
-def test_mean_is_logarithmic():
-    """Within 1e-6 of (y − x)/ln(y/x) for a ratio of 1.5, 0.4 % for 8; 0 where one fraction is."""
-    for ratio, tolerance in ((1.5, 1e-6), (3.0, 3e-4), (8.0, 4e-3)):
-        assert link_mean(0.1, 0.1 * ratio) == pytest.approx(0.1 * (ratio - 1) / np.log(ratio), rel=tolerance)
-    assert link_mean(0.3, 0.3) == pytest.approx(0.3)
-    assert link_mean(0.0, 0.3) == 0
-
-
 @pytest.mark.parametrize("shape", SHAPES)
 def test_symbol_is_that_of_the_laplacian(shape, rng):
     field = rng.standard_normal(shape)
@@ -53,7 +45,7 @@ def test_symbol_is_that_of_the_laplacian(shape, rng):
 
 def test_laplacian_error_has_no_direction():
     """The symbol is q² − q⁴/12 + O(q⁶) whatever the direction; a five-point stencil is not."""
-    weights = {step: w for step, w in links(2)}
+    weights = dict(links(2))
     q = 0.3
     for angle in np.linspace(0, np.pi / 2, 7):
         k = q * np.array([np.cos(angle), np.sin(angle)])
@@ -205,9 +197,13 @@ def test_unstable_step_is_an_error(rng):
     p, n = _random(rng, (16, 16))
     wild = replace(TERNARY, chi_pn=40.0)
     stepper = Stepper(wild, quiet_settings(kappa_polymer=0.01, kappa_nonsolvent=0.01), p, n)
-    with pytest.raises(SimulationError, match=r"unstable at step|no time step is short enough"):
+
+    def run() -> None:
         for _ in range(3000):
             stepper.step(50.0)
+
+    with pytest.raises(SimulationError, match="unstable at step"):
+        run()
 
 
 def test_step_control_refuses_a_step_too_long(rng):
