@@ -13,7 +13,9 @@ radial            porosity from the outline inwards; skin, polar, elongation are
 two_point         pair counts in any outline; correlation and integral_range sum them up
 lineal, cluster   lineal path, two-point cluster function
 structure_factor  S(q), its peak, the characteristic spacing
-uncertainty       intervals from blocks, combination after the GUM
+stereology        from section circles to spheres; spheres applies it to the pore bodies
+uncertainty       intervals from blocks, combination after the GUM; nested: batch means
+descriptors       numbers without length, for comparing sections
 """
 
 from __future__ import annotations
@@ -36,6 +38,7 @@ from poroscan.measure import (
     porosity,
     radial,
     shape,
+    spheres,
     structure_factor,
     surface,
     thickness,
@@ -65,14 +68,15 @@ _MODULES: tuple[tuple[_Measures, tuple[str, ...]], ...] = (
     (surface, ()),
     (chords, ()),
     (pore_size, ("pore_distance", "bodies")),
-    (topology, ("_pieces",)),
+    (spheres, ()),
+    (topology, ()),
+    (cluster, ("_pieces",)),
     (thickness, ()),
     (granulometry, ("walls",)),
     (shape, ()),
     (radial, ("depth",)),
     (correlation, ()),
     (lineal, ()),
-    (cluster, ()),
     (structure_factor, ()),
 )
 

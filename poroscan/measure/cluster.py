@@ -19,7 +19,6 @@ from typing import TYPE_CHECKING
 import numba
 import numpy as np
 import numpy.typing as npt
-from scipy import ndimage
 
 from poroscan.measure.part import Part
 from poroscan.measure.settings import MeasureSettings
@@ -74,7 +73,7 @@ def cluster_function(
     Parameters
     ----------
     labels
-        int32 labels of the connected pores, 0 elsewhere; 2-D or 3-D.
+        int32 labels of the connected pores (``bodies.pieces``), 0 elsewhere; 2-D or 3-D.
     particle
         bool mask of the same shape.
     max_lag
@@ -103,16 +102,10 @@ def cluster_function(
     return ClusterFunction(lags[keep], same[keep] / pairs[keep], pairs[keep])
 
 
-def label_pores(pores: BoolArray) -> npt.NDArray[np.int32]:
-    """Connected pores, neighbours by face, edge or corner (8 in 2-D, 26 in 3-D), as in the connected porosity."""
-    labels, _ = ndimage.label(pores, structure=np.ones((3,) * pores.ndim, bool), output=np.int32)
-    return np.asarray(labels, dtype=np.int32)
-
-
 def part(section: Section, settings: MeasureSettings, *, shared: Shared, rng: np.random.Generator) -> Part:
     """Curve cluster_function and the cluster length."""
     size = section.particle.shape
-    function = cluster_function(label_pores(section.pores), section.particle, max_lag=max(size))
+    function = cluster_function(shared.pieces, section.particle, max_lag=max(size))
     x = function.lag.astype(np.float64)
     unknown = np.full(x.size, math.nan)
     return Part(

@@ -25,7 +25,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 import numpy.typing as npt
 
-from poroscan.measure import elongation, polar, skin
+from poroscan.measure import elongation, polar, size_gradient, skin
 from poroscan.measure.part import Part, undefined
 from poroscan.measure.settings import MeasureSettings
 from poroscan.measure.uncertainty import BlockEstimate, block_linear, block_ratio, estimate_of, threshold_sd
@@ -41,7 +41,15 @@ Int32 = npt.NDArray[np.int32]
 #: Classes of equal area (volume) into which the normalised radius is cut; core, shell and rings are made up of whole classes.
 CLASSES = 1200
 
-_BASES = ("core_porosity", "shell_porosity", "skin_porosity", "skin_thickness", "radial_asymmetry", "radial_slope")
+_BASES = (
+    "core_porosity",
+    "shell_porosity",
+    "skin_porosity",
+    "skin_thickness",
+    "radial_asymmetry",
+    "radial_slope",
+    "pore_size_asymmetry",
+)
 
 
 @dataclass(frozen=True, eq=False)
@@ -191,6 +199,10 @@ def part(section: Section, settings: MeasureSettings, *, shared: Shared, rng: np
     ]
     inner_shell = (1 - settings.shell_area_fraction) ** (1 / section.ndim)
     inflation = shared.block_inflation
+    if section.view == "whole":
+        outer = classes >= CLASSES // 2
+        estimates["pore_size_asymmetry"] = size_gradient.estimate(section, shared, outer)
+        del outer
     estimates["core_porosity"] = _zone(table, band, 0, settings.core_fraction, inflation)
     estimates["shell_porosity"] = _zone(table, band, inner_shell, 1, inflation)
     if section.view == "whole":

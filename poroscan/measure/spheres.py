@@ -8,13 +8,21 @@ from __future__ import annotations
 
 import math
 from types import MappingProxyType
+from typing import TYPE_CHECKING
 
 import numpy as np
 import numpy.typing as npt
 
+from poroscan.measure.part import Part
+from poroscan.measure.settings import MeasureSettings
+from poroscan.measure.size_gradient import centroid_index
 from poroscan.measure.stereology import Unfolded, kernel, linear_classes
 from poroscan.measure.uncertainty import LEAST_BLOCKS, block_ratio, estimate_of
 from poroscan.quantities import Estimate
+from poroscan.section import Section
+
+if TYPE_CHECKING:
+    from poroscan.measure.shared import Shared
 
 Float = npt.NDArray[np.float64]
 
@@ -27,6 +35,7 @@ def estimates(
     *,
     block_area: npt.ArrayLike,
     rng: np.random.Generator,
+    weights: npt.ArrayLike | None = None,
     inflation: float = 1.0,
     replicates: int = 400,
 ) -> dict[str, Estimate]:
@@ -42,6 +51,8 @@ def estimates(
         Area of each block 1…n, pixels.
     rng
         For the resampling of blocks.
+    weights
+        Frame weight of each body; None counts each once.
     inflation
         Factor on variances for the correlation between blocks.
     replicates
@@ -57,23 +68,66 @@ def estimates(
         return {base: Estimate(math.nan) for base in BASES}
     if block.shape != d.shape:
         raise ValueError(f"block_of must have one entry per diameter ({d.size}), not shape {block.shape}")
+    w = np.ones_like(d) if weights is None else np.asarray(weights, float)
     n = area.size + 1
-    by = {k: np.bincount(block, d**k, n)[1:] for k in (-1, 1, 2, 3)}
+    by = {k: np.bincount(block, w * d**k, n)[1:] for k in (-1, 1, 2, 3)}
     d32 = block_ratio(3 * math.pi / 8 * by[2], by[1], inflation=inflation, scale="log")
     d43 = block_ratio(32 / (9 * math.pi) * by[3], by[2], inflation=inflation, scale="log")
     density = block_ratio(2 / math.pi * by[-1], area, inflation=inflation, scale="log")
     return {
-        "sphere_d50": _median(d, block, area, rng, inflation, replicates),
+        "sphere_d50": _median(d, w, block, area, rng, inflation, replicates),
         "sphere_d32": estimate_of(d32),
         "sphere_d43": estimate_of(d43),
         "sphere_density": estimate_of(density),
     }
 
 
+def part(section: Section, settings: MeasureSettings, *, shared: Shared, rng: np.random.Generator) -> Part:
+    """Sphere sizes behind the pore bodies of a section; nothing in a volume, where the bodies are seen whole.
+
+    Bodies that the frame cuts are left out, and the others counted by their Miles–Lantuéjoul weight.
+    """
+    if section.ndim != 2:
+        return Part()
+    table = shared.pore_table
+    keep = (table["area"] >= settings.smallest_pore_px) & ~table["touches_frame"]
+    d = table["diameter"][keep]
+    block = shared.block_at(centroid_index(section, table))[keep]
+    area = np.bincount(shared.blocks.ravel(), minlength=shared.n_blocks)[1:]
+    weights = frame_weight(d, section.particle.shape) if section.touches_frame else None
+    return Part(
+        estimates(
+            d,
+            block,
+            block_area=area,
+            weights=weights,
+            rng=rng,
+            inflation=shared.block_inflation,
+            replicates=settings.bootstrap_replicates,
+        )
+    )
+
+
+def frame_weight(diameters: Float, frame: tuple[int, ...]) -> Float:
+    """Weight of a round feature that lies wholly in a rectangular frame: frame area over the area that its centre may take.
+
+    Z1 Z2 / ((Z1 − d)(Z2 − d)) (Miles 1974; Lantuéjoul 1980), with the diameter for both Feret diameters; features that nearly
+    fill the frame get the weight of one that leaves a pixel.
+    """
+    room = [np.maximum(n - diameters, 1.0) / n for n in frame]
+    return np.asarray(1 / (room[0] * room[1]))
+
+
 def _median(
-    d: Float, block: npt.NDArray[np.int64], area: Float, rng: np.random.Generator, inflation: float, replicates: int
+    d: Float,
+    w: Float,
+    block: npt.NDArray[np.int64],
+    area: Float,
+    rng: np.random.Generator,
+    inflation: float,
+    replicates: int,
 ) -> Estimate:
-    whole = linear_classes(d, area=float(area.sum()))
+    whole = linear_classes(d, area=float(area.sum()), weights=w)
     value = whole.quantile(0.5)
     used = np.unique(block[block > 0])
     if not math.isfinite(value) or used.size < LEAST_BLOCKS:
@@ -81,7 +135,7 @@ def _median(
     # Classes stay those of the whole section; what is drawn anew is how many sections of each block fall in each.
     step = np.clip(np.searchsorted(whole.edges, d, side="right") - 1, 0, whole.diameter.size - 1)
     row = np.searchsorted(used, block)
-    keep = (block > 0).astype(float)
+    keep = w * (block > 0)
     row = np.minimum(row, used.size - 1)
     counts = np.zeros((used.size, whole.diameter.size))
     sums = np.zeros((used.size, 2))

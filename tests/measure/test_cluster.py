@@ -7,7 +7,8 @@ import pytest
 from media import boolean_discs, disc
 from numpy.testing import assert_allclose, assert_array_equal
 
-from poroscan.measure.cluster import cluster_function, label_pores
+from poroscan.measure.bodies import pieces
+from poroscan.measure.cluster import cluster_function
 from poroscan.measure.two_point import two_point
 
 
@@ -15,7 +16,7 @@ from poroscan.measure.two_point import two_point
 def test_equals_the_definition(shape, rng):
     particle = rng.random(shape) < 0.9
     pores = particle & (rng.random(shape) < 0.3)
-    labels = label_pores(pores)
+    labels = pieces(pores, diagonal=True)[0]
     function = cluster_function(labels, particle, max_lag=6, ratio=1.0)
     same, pairs = np.zeros(7), np.zeros(7)
     points = {tuple(p): labels[tuple(p)] for p in np.argwhere(particle).tolist()}
@@ -49,18 +50,18 @@ def test_separate_discs_vanish_beyond_their_diameter():
     for row in range(20, 400, 40):
         for column in range(20, 400, 40):
             pores[row - 13 : row + 14, column - 13 : column + 14] |= disc(12)
-    function = cluster_function(label_pores(pores), np.ones_like(pores), max_lag=399, ratio=1.05)
+    function = cluster_function(pieces(pores, diagonal=True)[0], np.ones_like(pores), max_lag=399, ratio=1.05)
     assert_array_equal(function.value[function.lag > 25], 0)
     assert function.rms_distance(ndim=2) == pytest.approx(12.0, rel=0.02)
 
 
 def test_corner_neighbours_are_one_pore():
-    assert label_pores(np.eye(3, dtype=bool)).max() == 1
+    assert pieces(np.eye(3, dtype=bool), diagonal=True)[0].max() == 1
 
 
 def test_lags_between_the_chosen_ones_change_little(rng):
     pores = boolean_discs((200, 200), radius=8.0, eta=0.4, rng=rng)
-    labels, inside = label_pores(pores), np.ones_like(pores)
+    labels, inside = pieces(pores, diagonal=True)[0], np.ones_like(pores)
     every = cluster_function(labels, inside, max_lag=150, ratio=1.0)
     some = cluster_function(labels, inside, max_lag=150)
     assert_allclose(np.interp(every.lag, some.lag, some.value), every.value, atol=0.003)

@@ -168,6 +168,13 @@ def test_intervals_of_sphere_sizes_cover(rng):
     assert inside[0] >= 86
 
 
+def test_frame_weight():
+    # oracles 1.4 for a square feature: frame 1000 × 800, both Feret diameters 50
+    got = spheres.frame_weight(np.array([50.0, 5000.0]), (1000, 800))
+    assert got[0] == pytest.approx(1 / (0.95 * 0.9375))
+    assert math.isfinite(got[1])
+
+
 def test_no_pores_is_undefined(rng):
     got = spheres.estimates([], [], block_area=np.ones(9), rng=rng)
     assert all(math.isnan(e.value) for e in got.values())
