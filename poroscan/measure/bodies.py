@@ -84,7 +84,7 @@ def split_bodies(pores: BoolArray, distance: Float32, *, split_depth: float) -> 
     return labels.reshape(pores.shape), int(n)
 
 
-@numba.njit(cache=True)  # type: ignore[untyped-decorator]
+@numba.njit(cache=True)
 def _deepest_first(level, inside, largest):  # type: ignore[no-untyped-def]
     start = np.zeros(largest + 2, dtype=np.int64)
     n = 0
@@ -103,7 +103,7 @@ def _deepest_first(level, inside, largest):  # type: ignore[no-untyped-def]
     return order
 
 
-@numba.njit(cache=True)  # type: ignore[untyped-decorator]
+@numba.njit(cache=True)
 def _flood(order, distance, shape, keep):  # type: ignore[no-untyped-def]
     planes, rows, columns = shape
     labels = np.zeros(distance.size, dtype=np.int32)
@@ -152,7 +152,7 @@ def _flood(order, distance, shape, keep):  # type: ignore[no-untyped-def]
     return labels, count
 
 
-@numba.njit(cache=True)  # type: ignore[untyped-decorator]
+@numba.njit(cache=True)
 def _root(parent, label):  # type: ignore[no-untyped-def]
     while parent[label] != label:
         parent[label] = parent[parent[label]]

@@ -108,38 +108,33 @@ def product_limit(lengths: Float, whole: Float, cut: Float) -> Float:
     return np.asarray(alive * hazard)
 
 
-@numba.njit(cache=True)  # type: ignore[untyped-decorator]
+@numba.njit(cache=True)
 def _runs(state, steps, n):  # type: ignore[no-untyped-def]
     planes, rows, columns = state.shape
     out = np.zeros((steps.shape[0], 2, 2, n + 1), dtype=np.int64)
+    # The run that ends at each pixel so far: twice its length, plus one where its start is cut.
+    run = np.zeros(state.shape, dtype=np.int32)
     for k in range(steps.shape[0]):
         dz, dy, dx = steps[k]
         for z in range(planes):
             for y in range(rows):
                 for x in range(columns):
                     s = state[z, y, x]
+                    before, length = np.uint8(0), 0
+                    if z >= dz and y >= dy and 0 <= x - dx < columns:
+                        before = state[z - dz, y - dy, x - dx]
+                        length = run[z - dz, y - dy, x - dx]
+                    if before >= 2 and before != s:
+                        cut = 1 if s < 2 or length & 1 else 0
+                        out[k, before & 1, cut, length >> 1] += 1
                     if s < 2:
+                        run[z, y, x] = 0
                         continue
-                    before = _state(state, z - dz, y - dy, x - dx)
-                    if before == s:
-                        continue  # not the first pixel of its run
-                    length, u, v, w = 1, z + dz, y + dy, x + dx
-                    after = _state(state, u, v, w)
-                    while after == s:
-                        length += 1
-                        u, v, w = u + dz, v + dy, w + dx
-                        after = _state(state, u, v, w)
-                    cut = 1 if before < 2 or after < 2 else 0
-                    out[k, s & 1, cut, length] += 1
+                    length = length + 2 if before == s else (2 if before >= 2 else 3)
+                    run[z, y, x] = length
+                    if z + dz >= planes or y + dy >= rows or not 0 <= x + dx < columns:
+                        out[k, s & 1, 1, length >> 1] += 1
     return out
-
-
-@numba.njit(cache=True)  # type: ignore[untyped-decorator]
-def _state(state, z, y, x):  # type: ignore[no-untyped-def]
-    planes, rows, columns = state.shape
-    if 0 <= z < planes and 0 <= y < rows and 0 <= x < columns:
-        return state[z, y, x]
-    return np.uint8(0)
 
 
 def part(section: Section, settings: MeasureSettings, *, shared: Shared, rng: np.random.Generator) -> Part:
@@ -187,7 +182,7 @@ def _distribution(runs: Int64, ndim: int) -> tuple[Float, Float]:
     whole, cut = (runs[:, i] / step[:, None] for i in (0, 1))
     used = (runs.sum(axis=1) > 0) & (lengths > 0)
     values, index = np.unique(np.round(lengths[used], 9), return_inverse=True)
-    whole, cut = (np.bincount(index, table[used], values.size) for table in (whole, cut))
+    whole, cut = (np.bincount(index, table[used], values.size).astype(np.float64, copy=False) for table in (whole, cut))
     return values, product_limit(values, whole, cut)
 
 

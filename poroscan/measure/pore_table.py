@@ -92,7 +92,7 @@ def _fill_shape(
     table["solidity"][:] = area / hull_pixels
 
 
-@numba.njit(cache=True)  # type: ignore[untyped-decorator]
+@numba.njit(cache=True)
 def _sums(labels, distance, depth, n):  # type: ignore[no-untyped-def]
     """Pixels, first and second moments, deepest distance, sum of depths; whether the frame cuts it."""
     planes, rows, columns = labels.shape
@@ -119,7 +119,7 @@ def _sums(labels, distance, depth, n):  # type: ignore[no-untyped-def]
     return out, touches
 
 
-@numba.njit(cache=True)  # type: ignore[untyped-decorator]
+@numba.njit(cache=True)
 def _perimeters(labels, steps, share, n):  # type: ignore[no-untyped-def]
     """Crofton perimeter of every label; a neighbouring label or the frame ends it."""
     rows, columns = labels.shape
@@ -137,7 +137,7 @@ def _perimeters(labels, steps, share, n):  # type: ignore[no-untyped-def]
     return out
 
 
-@numba.njit(cache=True)  # type: ignore[untyped-decorator]
+@numba.njit(cache=True)
 def _hulls(labels, n):  # type: ignore[no-untyped-def]
     """Feret diameters and pixels in the convex hull of every label."""
     rows, columns = labels.shape

@@ -168,7 +168,7 @@ def hull_of_rows(rows: Int64, first: Int64, last: Int64) -> Float:
     return hull
 
 
-@numba.njit(cache=True)  # type: ignore[untyped-decorator]
+@numba.njit(cache=True)
 def _hull(p):  # type: ignore[no-untyped-def]
     """Andrew's monotone chain on points sorted by the first, then the second coordinate."""
     n = p.shape[0]
@@ -188,12 +188,12 @@ def _hull(p):  # type: ignore[no-untyped-def]
     return out[: max(k - 1, 1)].copy()
 
 
-@numba.njit(cache=True)  # type: ignore[untyped-decorator]
+@numba.njit(cache=True)
 def _turn(a, b, c):  # type: ignore[no-untyped-def]
     return (b[0] - a[0]) * (c[1] - a[1]) - (b[1] - a[1]) * (c[0] - a[0])
 
 
-@numba.njit(cache=True)  # type: ignore[untyped-decorator]
+@numba.njit(cache=True)
 def _ferets(hull):  # type: ignore[no-untyped-def]
     n = hull.shape[0]
     largest, smallest = 0.0, np.inf
@@ -212,7 +212,7 @@ def _ferets(hull):  # type: ignore[no-untyped-def]
     return largest, (smallest if smallest < np.inf else 0.0)
 
 
-@numba.njit(cache=True)  # type: ignore[untyped-decorator]
+@numba.njit(cache=True)
 def _edge_midpoints(rows, first, last):  # type: ignore[no-untyped-def]
     """First and last midpoint of each half row, sorted by row."""
     n = rows.size
@@ -232,7 +232,7 @@ def _edge_midpoints(rows, first, last):  # type: ignore[no-untyped-def]
     return out
 
 
-@numba.njit(cache=True)  # type: ignore[untyped-decorator]
+@numba.njit(cache=True)
 def pixels_in_hull(rows, first, last):  # type: ignore[no-untyped-def]
     """Number of pixel centres in the convex hull of the pixel centres: area + border / 2 + 1 (Pick 1899)."""
     points = np.empty((2 * rows.size, 2))

@@ -155,7 +155,7 @@ def surface_per_volume(phase: BoolArray, inside: BoolArray, *, pixel_size: float
     return 2.0 * count_crossings(phase, inside).mean_per_length / pixel_size
 
 
-@numba.njit(cache=True)  # type: ignore[untyped-decorator]
+@numba.njit(cache=True)
 def _count(state, code, coded, steps, n):  # type: ignore[no-untyped-def]
     planes, rows, columns = state.shape
     out = np.zeros((3, steps.shape[0], n), dtype=np.int64)

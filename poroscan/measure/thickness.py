@@ -80,7 +80,7 @@ def local_thickness(phase: BoolArray, *, pixel_size: float) -> Float32:
     if not pixel_size > 0:
         raise ValueError(f"pixel_size must be a positive length per pixel, not {pixel_size!r}")
     squared = squared_thickness(phase)
-    thickness = np.sqrt(squared, dtype=np.float32)
+    thickness = np.sqrt(np.maximum(squared, 0), dtype=np.float32)
     thickness *= np.float32(2.0 * pixel_size)
     thickness -= np.float32(pixel_size) * phase
     if squared.size and phase.all():
@@ -205,7 +205,7 @@ def _steps(ndim: int) -> tuple[Int32, Int32, Int32]:
     return full, np.array([kinds.index(v) for v in shapes], dtype=np.int32), np.array(kinds, dtype=np.int32)
 
 
-@numba.njit(cache=True)  # type: ignore[untyped-decorator]
+@numba.njit(cache=True)
 def _containment(largest, steps, ndim):  # type: ignore[no-untyped-def]
     reach = int(np.sqrt(largest)) + 1
     table = np.full((steps.shape[0], largest + 1), -1, dtype=np.int32)
@@ -227,7 +227,7 @@ def _containment(largest, steps, ndim):  # type: ignore[no-untyped-def]
     return table
 
 
-@numba.njit(cache=True)  # type: ignore[untyped-decorator]
+@numba.njit(cache=True)
 def _undominated(squared, table, steps, kinds):  # type: ignore[no-untyped-def]
     planes, rows, columns = squared.shape
     found = np.empty(squared.size, dtype=np.int32)
@@ -242,7 +242,7 @@ def _undominated(squared, table, steps, kinds):  # type: ignore[no-untyped-def]
     return found[:n].copy()
 
 
-@numba.njit(cache=True)  # type: ignore[untyped-decorator]
+@numba.njit(cache=True)
 def _inside_another(squared, table, steps, kinds, z, y, x, d):  # type: ignore[no-untyped-def]
     planes, rows, columns = squared.shape
     for i in range(steps.shape[0]):
@@ -257,7 +257,7 @@ def _inside_another(squared, table, steps, kinds, z, y, x, d):  # type: ignore[n
     return False
 
 
-@numba.njit(cache=True)  # type: ignore[untyped-decorator]
+@numba.njit(cache=True)
 def _largest_first(squared, discs, largest):  # type: ignore[no-untyped-def]
     start = np.zeros(largest + 2, dtype=np.int64)
     for i in discs:
@@ -272,7 +272,7 @@ def _largest_first(squared, discs, largest):  # type: ignore[no-untyped-def]
     return order
 
 
-@numba.njit(cache=True)  # type: ignore[untyped-decorator]
+@numba.njit(cache=True)
 def _unpainted(out, thick):  # type: ignore[no-untyped-def]
     """Bits of the unpainted pixels, in bricks; how many each brick has; how many bricks of each block have any."""
     planes, rows, columns = out.shape
@@ -294,7 +294,7 @@ def _unpainted(out, thick):  # type: ignore[no-untyped-def]
     return bits, left, blocks
 
 
-@numba.njit(cache=True)  # type: ignore[untyped-decorator]
+@numba.njit(cache=True)
 def _disc_words(largest, root):  # type: ignore[no-untyped-def]
     """Bits of the pixels |x|² ≤ rest in the 8 × 8 brick whose first pixel lies at (row, column) from the centre, all small discs."""
     reach = root[largest]
@@ -315,7 +315,7 @@ def _disc_words(largest, root):  # type: ignore[no-untyped-def]
     return words
 
 
-@numba.njit(cache=True)  # type: ignore[untyped-decorator]
+@numba.njit(cache=True)
 def _paint(out, centres, sizes, root, words):  # type: ignore[no-untyped-def]
     planes, rows, columns = out.shape
     thick = 8 if planes > 1 else 1
@@ -347,7 +347,7 @@ def _paint(out, centres, sizes, root, words):  # type: ignore[no-untyped-def]
                                     blocks[cz, cy, cx] -= 1
 
 
-@numba.njit(cache=True)  # type: ignore[untyped-decorator]
+@numba.njit(cache=True)
 def _paint_brick(out, bits, u, v, w, z, y, x, d, root, words):  # type: ignore[no-untyped-def]
     """Paint the unpainted pixels of one brick that lie in the disc; returns their number."""
     thick = bits.shape[3]
@@ -383,7 +383,7 @@ def _paint_brick(out, bits, u, v, w, z, y, x, d, root, words):  # type: ignore[n
     return n
 
 
-@numba.njit(cache=True)  # type: ignore[untyped-decorator]
+@numba.njit(cache=True)
 def _disc_word(rest, y0, x0, root):  # type: ignore[no-untyped-def]
     word = np.uint64(0)
     for j in range(8):
@@ -403,11 +403,11 @@ def part(section: Section, settings: MeasureSettings, *, shared: Shared, rng: np
     """Local thickness of pores and walls; curves local_thickness_pores and local_thickness_walls."""
     estimates: dict[str, Estimate] = {}
     curves = []
+    sd = _threshold(section, shared)
     for base, name, table in (("thickness", "pores", shared.pore_thickness), ("wall", "walls", shared.wall_thickness)):
         if table.totals.sum() == 0:
             estimates |= dict(undefined([f"{base}_{statistic}" for statistic in _STATISTICS]).estimates)
             continue
-        sd = _threshold(section, walls=base == "wall")
         estimates |= {f"{base}_{k}": e for k, e in _statistics(table, shared.block_inflation, sd).items()}
         curves.append(_curve(f"local_thickness_{name}", table))
     return Part(estimates, tuple(curves))
@@ -433,19 +433,14 @@ def _statistics(table: ThicknessTable, inflation: float, median_sd: float | None
     return out
 
 
-def _threshold(section: Section, *, walls: bool) -> float | None:
-    """Threshold component of the median: half the distance of the medians at both ends of the band."""
-    medians = []
-    for pores in (section.pores_low, section.pores_high):
-        if pores is None:
-            return None
-        phase = section.particle & ~pores if walls else pores
-        table = thickness_table(phase)
-        total = table.totals
-        if total.sum() == 0:
-            return None
-        medians.append(float(np.interp(0.5, (np.cumsum(total) - total / 2.0) / total.sum(), table.diameters)))
-    return threshold_sd(*medians)
+def _threshold(section: Section, shared: Shared) -> float | None:
+    """Threshold component of a thickness, to first order: a boundary of S_V (L_A) per volume (area) that moves by δ changes the
+    porosity by δ · S_V (δ · L_A) and every diameter by 2 δ."""
+    low, high, crossings = section.pores_low, section.pores_high, shared.crossings.mean_per_length
+    if low is None or high is None or not crossings > 0:
+        return None
+    porosity_sd = threshold_sd(*(np.count_nonzero(pores) / shared.n_particle for pores in (low, high)))
+    return 2.0 * porosity_sd / (crossings * (math.pi / 2.0 if section.ndim == 2 else 2.0))
 
 
 def _curve(name: str, table: ThicknessTable) -> Curve:

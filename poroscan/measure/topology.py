@@ -97,7 +97,7 @@ _PLANE = _plane_table()
 _SPACE = _space_table()
 
 
-@numba.njit(cache=True)  # type: ignore[untyped-decorator]
+@numba.njit(cache=True)
 def _euler(state, code, coded, table, n):  # type: ignore[no-untyped-def]
     planes, rows, columns = state.shape
     deep = 2 if planes > 1 or table.size == 256 else 1
