@@ -21,6 +21,7 @@ TOLERANCE = 1e-10
 
 _STEPS = 40
 _LARGEST_LOG_STEP = 0.7  # of a component that is no trace
+_CAUTIOUS_LOG_STEP = 0.12
 _TRACE = 1e-5
 
 
@@ -41,8 +42,20 @@ def solve_phases(mixture: Mixture, logs: FloatArray, constraint: Constraint | No
     ndarray or None
         Logarithms of the fractions of the coexisting phases; None where the iteration does not converge.
     """
+    return _iterate(mixture, logs, constraint, _LARGEST_LOG_STEP, _STEPS)
+
+
+def solve_phases_cautiously(mixture: Mixture, logs: FloatArray) -> FloatArray | None:
+    """Three coexisting phases from a rough guess: as :func:`solve_phases`, and again in small steps where that fails."""
+    solved = _iterate(mixture, logs, None, _LARGEST_LOG_STEP, _STEPS)
+    return _iterate(mixture, logs, None, _CAUTIOUS_LOG_STEP, 4 * _STEPS) if solved is None else solved
+
+
+def _iterate(
+    mixture: Mixture, logs: FloatArray, constraint: Constraint | None, largest_step: float, steps: int
+) -> FloatArray | None:
     logs = np.array(logs, dtype=float)
-    for _ in range(_STEPS):
+    for _ in range(steps):
         residual, slopes = _equations(mixture, logs, constraint)
         try:
             step = np.linalg.solve(slopes, -residual).reshape(3, -1, order="F")
@@ -50,7 +63,7 @@ def solve_phases(mixture: Mixture, logs: FloatArray, constraint: Constraint | No
             return None
         present = np.exp(logs) > _TRACE
         largest = float(np.abs(np.where(present, step, 0.0)).max())
-        proposed = logs + step * min(1.0, _LARGEST_LOG_STEP / max(largest, 1e-300))
+        proposed = logs + step * min(1.0, largest_step / max(largest, 1e-300))
         logs = np.minimum(proposed, 0.0)  # no fraction above 1 on the way
         if not np.isfinite(logs).all():
             return None

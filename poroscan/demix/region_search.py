@@ -29,6 +29,8 @@ _LEAST_LOG = -20.0
 _MERGING = 0.05
 _ON_EDGE = 1e-6
 _ATTEMPTS = 6
+_TRIES = 8
+_NEAR_SIDE = 0.15
 
 
 @dataclass
@@ -144,11 +146,8 @@ def _strike_gap(search: _Search, edge: str, reached: FloatArray) -> None:
 def _ended_at_triangle(search: _Search, followed: Trace) -> tuple[list[FloatArray], str]:
     """Cut a trace where it meets a side of the triangle that undercuts it."""
     last = followed.logs[-1]
-    triangle = _stable_triangle(search, last, followed.third)
-    known = [t for t in search.triangles if t.is_same(triangle)]
-    if known:
-        triangle = known[0]
-    else:
+    triangle = _triangle_met(search, followed)
+    if not any(known.is_same(triangle) for known in search.triangles):
         search.triangles.append(triangle)
         search.open_sides += [(triangle.logs[:, list(side)], triangle.logs[:, 3 - sum(side)]) for side in SIDES]
     side, other = _side_met(triangle, last)
@@ -159,17 +158,36 @@ def _ended_at_triangle(search: _Search, followed: Trace) -> tuple[list[FloatArra
     return [*kept, pair], "triangle"
 
 
-def _stable_triangle(search: _Search, pair: FloatArray, third: FloatArray | None) -> Triangle:
+def _triangle_met(search: _Search, followed: Trace) -> Triangle:
+    """The triangle whose third phase undercuts the last tie line: one known already, or a new one.
+
+    The guess for a new one is the undercutting phase with one of the last tie lines; a rough guess can lead astray, so the
+    tie lines are tried backwards.
+    """
+    last = followed.logs[-1]
+    for known in search.triangles:
+        side, other = _side_met(known, last)
+        near = np.abs(np.exp(known.logs[:, side]) - np.exp(last)).max() < _NEAR_SIDE
+        if near and tie_energy_above(search.mixture, last, np.exp(known.logs[:, other])) < 0:
+            return known
+    for pair in followed.logs[: -_TRIES - 1 : -1]:
+        triangle = _stable_triangle(search, pair, followed.third)
+        if triangle is not None:
+            return triangle
+    raise _lost(search.mixture, f"where a third phase appears near {np.exp(last).mean(axis=1).round(4).tolist()}")
+
+
+def _stable_triangle(search: _Search, pair: FloatArray, third: FloatArray | None) -> Triangle | None:
     """Triangle of a tie line and a phase that undercuts it; where a fourth phase undercuts that, it takes its place."""
     for _ in range(_ATTEMPTS):
         triangle = None if third is None else find_triangle(search.mixture, pair, third)
         if triangle is None:
-            break
+            return None
         third = undercutting_phase(search.mixture, triangle.logs, search.table)
         if third is None:
             return triangle
         pair = triangle.logs[:, _side_met(triangle, pair)[0]]
-    raise _lost(search.mixture, f"where a third phase appears near {np.exp(pair).mean(axis=1).round(4).tolist()}")
+    return None
 
 
 def _side_met(triangle: Triangle, logs: FloatArray) -> tuple[list[int], int]:

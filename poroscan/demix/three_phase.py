@@ -6,7 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from poroscan.demix.equilibrium import potential_gap, solve_phases
+from poroscan.demix.equilibrium import potential_gap, solve_phases_cautiously
 from poroscan.demix.interaction import FloatArray
 from poroscan.demix.mixture import Mixture
 
@@ -73,7 +73,7 @@ def find_triangle(mixture: Mixture, pair: FloatArray, third: FloatArray) -> Tria
         logs = np.column_stack([pair, np.log(third)])
     logs[:, 2] = np.maximum(logs[:, 2], _LEAST_LOG)
     logs = np.where(np.isinf(logs), _LEAST_LOG, logs)
-    solved = solve_phases(mixture, logs)
+    solved = solve_phases_cautiously(mixture, logs)
     if solved is None:
         return None
     phi = np.exp(solved)

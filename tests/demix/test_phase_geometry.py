@@ -73,6 +73,9 @@ def test_sides_along_a_tie_line(diagram: PhaseDiagram, solvent: float) -> None:
     assert changes == [METASTABLE_LEAN, UNSTABLE, METASTABLE_RICH]
     assert (np.diff(found.side) >= 0).all()
     np.testing.assert_allclose(found.lever, share, atol=2e-3)
+    # the sides part half-way between the spinodal crossings
+    unstable = share[found.state == UNSTABLE]
+    assert share[np.argmax(found.side > 0)] == pytest.approx(unstable[[0, -1]].mean(), abs=5e-3)
 
 
 def test_outside_the_gap_the_side_is_that_of_the_nearer_branch(diagram: PhaseDiagram) -> None:

@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 
 from poroscan.demix.flash import flash
-from poroscan.demix.mixture import Mixture
+from poroscan.demix.mixture import Mixture, site_potentials
 from poroscan.demix.phase_diagram import PhaseDiagram, find_phase_diagram
 
 
@@ -36,6 +36,18 @@ def test_three_two_phase_regions_leave_the_triangle(published: PhaseDiagram) -> 
     for region in published.regions:
         side = np.exp(region.logs[0 if region.ends[0] == "triangle" else -1]).T
         assert all(np.abs(corners - phase).max(axis=1).min() < 1e-9 for phase in side)
+
+
+def test_families_are_cut_where_the_third_phase_takes_over(published: PhaseDiagram) -> None:
+    # past the side of the triangle a tie line still solves the equations, but the third phase lies below its plane
+    mixture, (triangle,) = published.mixture, published.triangles
+    phases = triangle.phases.T
+    energy = mixture.free_energy(phases[0], phases[2])
+    for region in published.regions:
+        for logs in region.logs:
+            if np.isfinite(logs).all():
+                plane = site_potentials(mixture, logs)[:, 0]
+                assert (energy - plane @ phases).min() > -1e-12
 
 
 def test_flash_inside_the_triangle_gives_three_phases(published: PhaseDiagram) -> None:
