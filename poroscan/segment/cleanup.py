@@ -7,7 +7,6 @@ from __future__ import annotations
 
 import numpy as np
 import numpy.typing as npt
-from scipy import ndimage
 
 from poroscan.section import BoolArray, FloatArray
 

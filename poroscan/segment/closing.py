@@ -168,5 +168,23 @@ def _bodies(depth: npt.NDArray[np.float32], mask: BoolArray, neck: float) -> npt
     height = np.where(mask, np.log(np.maximum(depth, 1.0)) + 1.0, 0.0)
     lowered = np.maximum(height + np.log(neck), 0.0)
     flat = reconstruction(lowered, height, method="dilation")
-    markers, _ = ndimage.label(local_maxima(flat) & mask, np.ones((3, 3)))
-    return markers.astype(np.int32)
+    markers, count = ndimage.label(local_maxima(flat) & mask, np.ones((3, 3)))
+    return _without_bumps(markers.astype(np.int32), count, depth, mask)
+
+
+#: A maximum shallower than this fraction of the deepest of its body is a bump, not a particle.
+BUMP = 0.35
+
+
+def _without_bumps(
+    markers: npt.NDArray[np.int32], count: int, depth: npt.NDArray[np.float32], mask: BoolArray
+) -> npt.NDArray[np.int32]:
+    if count == 0:
+        return markers
+    bodies, number = ndimage.label(mask)
+    deepest = np.concatenate([[0.0], np.atleast_1d(ndimage.maximum(depth, bodies, np.arange(1, number + 1)))])
+    index = np.arange(1, count + 1)
+    own = np.atleast_1d(ndimage.maximum(depth, markers, index))
+    body = np.atleast_1d(ndimage.maximum(bodies, markers, index)).astype(int)
+    keep = np.concatenate([[False], own >= BUMP * deepest[body]])
+    return (np.cumsum(keep) * keep)[markers].astype(np.int32)

@@ -16,6 +16,7 @@ from poroscan.section import BoolArray
 from poroscan.segment.histogram import Levels
 from poroscan.segment.result import Threshold
 from poroscan.segment.settings import SegmentSettings
+from poroscan.segment.trained import Odds
 
 Float32 = npt.NDArray[np.float32]
 
@@ -136,6 +137,17 @@ def two_level(inside: Inside, settings: SegmentSettings) -> Pores:
         return keep[labels]
 
     return _banded(inside, settings, mask, levels.limit, 0.35 * levels.spread, "two levels")
+
+
+def trained(inside: Inside, settings: SegmentSettings, odds: Odds) -> Pores:
+    """Pixels more like the user's pore strokes than the material ones; the band is one standard uncertainty of the log-odds."""
+    least = settings.min_pore_px or 4
+    seen_through = np.zeros_like(inside.mask) if odds.surroundings is None else odds.surroundings
+    shifts = (0.0, 1.0, -1.0)
+    masks = [(odds.value > s * odds.error) | seen_through for s in shifts]
+    pores, low, high = (tidy(m & inside.mask, inside.mask, least) for m in masks)
+    flags = () if pores.any() else ("no_pores",)
+    return Pores(pores, low & pores, high | pores, math.nan, math.nan, "classifier trained on strokes", flags)
 
 
 def fixed(inside: Inside, settings: SegmentSettings, level: float) -> Pores:

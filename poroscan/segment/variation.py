@@ -66,7 +66,7 @@ def _momentum(iterations: int) -> list[float]:
 # Rows are handled without a branch, so that the compiler can use vector instructions: edges that leave the mask have the limit 0.
 @njit(cache=True, error_model="numpy")
 def _solve(f, inside, weight, momentum):  # type: ignore[no-untyped-def]
-    rows, columns = f.shape
+    rows = f.shape[0]
     u = f.copy()
     down, down_old = np.zeros_like(f), np.zeros_like(f)
     right, right_old = np.zeros_like(f), np.zeros_like(f)
