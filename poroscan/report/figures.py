@@ -13,12 +13,14 @@ from poroscan.quantities import by_key
 from poroscan.report.source import Key
 from poroscan.report.svg import BLUE, GREY, ORANGE, Series, dot_chart, line_chart
 
-#: Curves that are shown: name -> label of x, label of y, logarithmic x, what it shows.
+#: Curves that are shown: name -> label of x, label of y, whether it is a cumulative share, what it shows.
 SHOWN: Mapping[str, tuple[str, str, bool, str]] = {
     "pore_size_area": ("pore diameter", "share of pore area below", True, "Pore sizes"),
     "radial_porosity": ("distance from the outline", "porosity", False, "Radial profile"),
     "s2": ("distance r", "two-point correlation S₂(r)", False, "Two-point correlation"),
 }
+
+_RANGE: Mapping[bool, tuple[float, float] | None] = {True: (0.0, 1.0), False: None}
 
 #: Quantities by which batches are set side by side.
 COMPARED: tuple[str, ...] = ("porosity", "pore_d50_um", "wall_d50_um", "equivalent_diameter_um")
@@ -67,14 +69,14 @@ def batch_figures(keys: Sequence[Key], curves: Curves, units: Units) -> Iterator
     tuple
         Caption and chart.
     """
-    for name, (x_label, y_label, log, caption) in SHOWN.items():
+    for name, (x_label, y_label, share, caption) in SHOWN.items():
         present = [key for key in keys if (key, name) in curves]
         unit = _common_unit([units[key, name][0] for key in present])
         lines = [curves[key, name] for key in present if units[key, name][0] == unit]
         if not lines:
             continue
         thin = [Series(s.x, s.y, style="thin", colour=GREY) for s in lines]
-        mean = [_mean(lines, log=log)] if len(lines) > 1 else []
+        mean = [_mean(lines, share=share)] if len(lines) > 1 else []
         words = f"{caption} of {len(lines)} particles, and their mean"
         yield (
             caption,
@@ -83,7 +85,7 @@ def batch_figures(keys: Sequence[Key], curves: Curves, units: Units) -> Iterator
                 x_label=_with_unit(x_label, unit),
                 y_label=y_label,
                 label=words,
-                x_log=log,
+                y_range=_RANGE[share],
                 size=(340, 220),
             ),
         )
@@ -106,7 +108,7 @@ def particle_figures(key: Key, curves: Curves, units: Units, row: Mapping[str, A
     markupsafe.Markup
         The charts.
     """
-    for name, (x_label, y_label, log, caption) in SHOWN.items():
+    for name, (x_label, y_label, share, caption) in SHOWN.items():
         if (key, name) not in curves:
             continue
         s = curves[key, name]
@@ -116,7 +118,7 @@ def particle_figures(key: Key, curves: Curves, units: Units, row: Mapping[str, A
             x_label=_with_unit(x_label, units[key, name][0]),
             y_label=y_label,
             label=f"{caption} of particle {key[2]} of {key[1]}",
-            x_log=log,
+            y_range=_RANGE[share],
         )
 
 
@@ -130,15 +132,12 @@ def _reference(name: str, s: Series, row: Mapping[str, Any]) -> list[Series]:
     return [Series(ends, np.full(2, level), style="dashed", colour=ORANGE)]
 
 
-def _mean(lines: Sequence[Series], *, log: bool) -> Series:
-    """Mean curve on a common x, over the particles that reach there; at least half of them."""
-    ends = [(float(s.x[0]), float(s.x[-1])) for s in lines if len(s.x)]
-    low, high = min(a for a, _ in ends), max(b for _, b in ends)
-    x = np.geomspace(max(low, 1e-12), high, 60) if log else np.linspace(low, high, 60)
-    outside = (
-        (0.0, 1.0) if log else (math.nan, math.nan)
-    )  # a cumulative share is 0 before its first and 1 after its last
-    table = np.array([np.interp(x, s.x, s.y, left=outside[0], right=outside[1]) for s in lines if len(s.x)])
+def _mean(lines: Sequence[Series], *, share: bool) -> Series:
+    """Mean curve on a common x, where at least half of the particles reach; a share is 1 beyond its last point."""
+    used = [s for s in lines if len(s.x)]
+    x = np.linspace(min(float(s.x[0]) for s in used), max(float(s.x[-1]) for s in used), 60)
+    beyond = 1.0 if share else math.nan
+    table = np.array([np.interp(x, s.x, s.y, left=0.0 if share else math.nan, right=beyond) for s in used])
     number = np.isfinite(table).sum(axis=0)
     total = np.where(np.isfinite(table), table, 0.0).sum(axis=0)
     y = np.where(2 * number >= len(table), total / np.maximum(number, 1), math.nan)

@@ -22,6 +22,7 @@ NUMBER_RGB = (255, 255, 255)
 
 _GREYS = 240
 _WASH = 0.5
+_GROUND, _DOT = 1, 2
 ORANGE_INDEX, PORE_INDEX, _NUMBER, _BACK = 250, 251, 252, 0
 _DIGITS = {  # 3 × 5 dots, row by row
     "0": "111101101101111",
@@ -62,7 +63,8 @@ def draw(
     index[_inner_edge(pores)] = PORE_INDEX
     index[_outline(labels, thickness=1 + max(grey.shape) // 900)] = ORANGE_INDEX
     if numbers:
-        _draw_numbers(index, labels)
+        marks = _numbers(labels)
+        index[marks > 0] = np.where(marks == _DOT, _NUMBER, _BACK)[marks > 0]
     return index
 
 
@@ -125,13 +127,16 @@ def thumbnail(
         grey = resize(grey, shape, order=1, anti_aliasing=True, preserve_range=True).astype(np.float32)
         pores = resize(pores.astype(np.float32), shape, order=1, anti_aliasing=True, preserve_range=True) > 0.5
         labels = labels[_nearest(labels.shape[0], shape[0])][:, _nearest(labels.shape[1], shape[1])]
-    rgb = _tinted(palette()[draw(grey, labels, np.zeros_like(pores), numbers=numbers)], pores)
+    rgb = _tinted(palette()[draw(grey, labels, np.zeros_like(pores))], pores)
+    if numbers:
+        marks = _numbers(labels)
+        rgb[marks == _GROUND], rgb[marks == _DOT] = 0, NUMBER_RGB
     return bytes(imagecodecs.webp_encode(rgb, level=quality, lossless=False, method=5))
 
 
 def _tinted(rgb: npt.NDArray[np.uint8], pores: BoolArray) -> npt.NDArray[np.uint8]:
     """Pores in a wash of blue: on a small picture edges of one pixel would hide the boundary that is to be checked."""
-    plain = pores & (rgb[..., 0] == rgb[..., 1])  # not where an outline or a number is drawn
+    plain = pores & (rgb[..., 0] == rgb[..., 1])  # not where an outline is drawn
     rgb[plain] = ((1 - _WASH) * rgb[plain] + _WASH * np.array(PORE_RGB)).astype(np.uint8)
     return rgb
 
@@ -170,21 +175,24 @@ def _outline(labels: npt.NDArray[np.integer], *, thickness: int) -> BoolArray:
     return edge
 
 
-def _draw_numbers(index: npt.NDArray[np.uint8], labels: npt.NDArray[np.integer]) -> None:
-    size = max(2, max(labels.shape) // 170)
+def _numbers(labels: npt.NDArray[np.integer]) -> npt.NDArray[np.uint8]:
+    """Where the number of each particle is drawn at its centroid: ``_DOT`` for the digits, ``_GROUND`` around them."""
+    marks = np.zeros(labels.shape, dtype=np.uint8)
+    size = max(2, max(labels.shape) // 150)
     count = int(labels.max(initial=0))
     area = np.bincount(labels.ravel(), minlength=count + 1)
     rows = np.bincount(labels.ravel(), np.repeat(np.arange(labels.shape[0]), labels.shape[1]), minlength=count + 1)
     cols = np.bincount(labels.ravel(), np.tile(np.arange(labels.shape[1]), labels.shape[0]), minlength=count + 1)
     for k in range(1, count + 1):
         if area[k]:
-            _stamp(index, str(k), round(rows[k] / area[k]), round(cols[k] / area[k]), size)
+            _stamp(marks, str(k), round(rows[k] / area[k]), round(cols[k] / area[k]), size)
+    return marks
 
 
-def _stamp(index: npt.NDArray[np.uint8], text: str, row: int, column: int, size: int) -> None:
-    glyphs = [np.array([int(d) for d in _DIGITS[c]], dtype=bool).reshape(5, 3) for c in text]
-    dots = np.concatenate([np.pad(g, ((1, 1), (1, 0))) for g in glyphs], axis=1)
-    dots = np.kron(np.pad(dots, ((0, 0), (0, 1))), np.ones((size, size), dtype=bool)).astype(bool)
+def _stamp(marks: npt.NDArray[np.uint8], text: str, row: int, column: int, size: int) -> None:
+    glyphs = [np.array([int(d) for d in _DIGITS[c]], dtype=np.uint8).reshape(5, 3) for c in text]
+    dots = np.concatenate([np.pad(g, ((2, 2), (1, 1))) for g in glyphs], axis=1)
+    dots = np.kron(_GROUND + np.pad(dots, ((0, 0), (1, 1))), np.ones((size, size), dtype=np.uint8))
     top, left = max(0, row - dots.shape[0] // 2), max(0, column - dots.shape[1] // 2)
-    place = index[top : top + dots.shape[0], left : left + dots.shape[1]]
-    place[...] = np.where(dots[: place.shape[0], : place.shape[1]], _NUMBER, _BACK)
+    place = marks[top : top + dots.shape[0], left : left + dots.shape[1]]
+    place[...] = dots[: place.shape[0], : place.shape[1]]

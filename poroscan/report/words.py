@@ -100,7 +100,7 @@ def in_words(pattern: str, row: Row, key: str) -> str:
     if value == UNDEFINED:
         return ""
     unit = f"\u00a0{q.unit_words}" if _finite(row.get(q.key)) and q.unit_words else ""
-    return pattern.format(f"{value}{unit}") + (f" (95 % interval {ends}{unit})." if ends else ".")
+    return pattern.format(f"{value}{unit}") + (f" (95\u00a0% interval {ends}{unit})." if ends else ".")
 
 
 def pixel_unit(q: Quantity) -> str:
@@ -129,7 +129,7 @@ def per_cent(pattern: str, row: Row, key: str) -> str:
     sentence = pattern.format(f"{fixed(value, decimals)}\u00a0%")
     if low is None or high is None:
         return f"{sentence}."
-    return f"{sentence} (95 % interval {fixed(low, decimals)} to {fixed(high, decimals)}\u00a0%)."
+    return f"{sentence} (95\u00a0% interval {fixed(low, decimals)} to {fixed(high, decimals)}\u00a0%)."
 
 
 def batch_counts(row: Row) -> str:
@@ -206,7 +206,7 @@ def _asymmetry(row: Row) -> str:
     if math.isnan(value + low + high):
         return ""
     shown, ends = parted(interval(value, low, high))
-    text = f"radial asymmetry {shown}, 95 % interval {ends}"
+    text = f"radial asymmetry {shown}, 95\u00a0% interval {ends}"
     if low > 0:
         return f"The outer half of the section is more porous than the inner half ({text})."
     if high < 0:

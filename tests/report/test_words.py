@@ -21,8 +21,8 @@ def test_sentences_carry_number_unit_and_interval() -> None:
         pore_d50_um_high=3.4,
     )
     assert words.batch_sentences(row) == [
-        "Pores take up 43.2\u00a0% of the section (95 % interval 41.9 to 44.5\u00a0%).",
-        "Half of the pore area lies in pores wider than 3.21\u00a0µm (95 % interval 3.00 to 3.40\u00a0µm).",
+        "Pores take up 43.2\u00a0% of the section (95\u00a0% interval 41.9 to 44.5\u00a0%).",
+        "Half of the pore area lies in pores wider than 3.21\u00a0µm (95\u00a0% interval 3.00 to 3.40\u00a0µm).",
     ]
 
 
