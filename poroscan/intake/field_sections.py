@@ -11,6 +11,9 @@ import numpy.typing as npt
 
 from poroscan.section import PixelSize, Section
 
+#: Share of every side of the array that polymer takes where a field has no outline.
+_ON_FACE = 0.05
+
 FieldView = Literal["auto", "whole", "interior"]
 
 
@@ -42,8 +45,8 @@ def section_of_array(
     closing_px
         Radius in pixels; None takes 2 % of the equivalent diameter of the polymer, at least 2.
     view
-        ``whole``, ``interior`` (no outline: everything is particle), or ``auto``: interior where the particle fills at least
-        98 % of the border.
+        ``whole``, ``interior`` (no outline: everything is particle), or ``auto``: interior where polymer takes at least 5 % of
+        every side of the array.
     labels
         Which whole numbers mean ``pore``, ``polymer`` and ``outside``, for a labelled mask; then neither threshold nor closing is
         used.
@@ -69,7 +72,7 @@ def section_of_array(
         if not polymer.any():
             raise ValueError("values hold no polymer at this threshold; lower threshold")
         particle = _filled(polymer, _radius(polymer, closing_px))
-        if view == "interior" or (view == "auto" and _border_share(particle) >= 0.98):
+        if view == "interior" or (view == "auto" and _least_face_share(polymer) >= _ON_FACE):
             particle = np.ones(values.shape, dtype=bool)
         pores = particle & ~polymer
     shown_view: Literal["whole", "interior"] = "interior" if bool(particle.all()) else "whole"
@@ -151,9 +154,9 @@ def _filled(polymer: npt.NDArray[np.bool_], radius: float) -> npt.NDArray[np.boo
     return inner
 
 
-def _border_share(mask: npt.NDArray[np.bool_]) -> float:
-    faces = [mask.take(i, axis=a).ravel() for a in range(mask.ndim) for i in (0, -1)]
-    return float(np.concatenate(faces).mean())
+def _least_face_share(mask: npt.NDArray[np.bool_]) -> float:
+    """Smallest share of the mask on a side of the array."""
+    return min(float(mask.take(i, axis=a).mean()) for a in range(mask.ndim) for i in (0, -1))
 
 
 def _from_labels(values: npt.NDArray, labels: Mapping[str, int]) -> tuple[npt.NDArray[np.bool_], npt.NDArray[np.bool_]]:

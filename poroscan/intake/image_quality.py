@@ -24,6 +24,9 @@ UNEVEN = 0.25
 #: Brightness of a band over the contrast, and rows in bands, from which a picture counts as charging.
 BAND, BAND_ROWS = 0.08, 3
 
+#: Noise over the standard deviation of the picture below which detail does not count as seen.
+_INVISIBLE = 0.01
+
 _LARGEST_FFT = 1024
 _BLOCKS = 16
 
@@ -118,7 +121,7 @@ def spectral_resolution(grey: Grey) -> float:
     """Smallest length that stands out of the noise in the power spectrum, in pixels (2 is the best there is).
 
     The radially averaged power of the middle of the picture (Hann window, at most 1024²) is compared with its floor between
-    0.4 and 0.5 cycles per pixel; the resolution is one over the highest frequency up to which the power exceeds twice that floor.
+    0.4 and 0.5 cycles per pixel, or with the power of a noise of 1 % of the picture's standard deviation where that is more; the resolution is one over the highest frequency up to which the power exceeds twice that floor.
     """
     side = min(_LARGEST_FFT, *grey.shape) // 2 * 2
     if side < 32:
@@ -131,7 +134,8 @@ def spectral_resolution(grey: Grey) -> float:
     bins = (frequency * side).astype(np.int64).ravel()
     counts = np.bincount(bins)
     radial = np.bincount(bins, weights=power.ravel()) / np.maximum(counts, 1)
-    floor = float(np.median(radial[int(0.4 * side) : side // 2]))
+    invisible = (_INVISIBLE * float(crop.std())) ** 2 * float((window**2).sum()) ** 2
+    floor = max(float(np.median(radial[int(0.4 * side) : side // 2])), invisible)
     above = radial[1 : side // 2] > 2 * floor
     last = int(np.argmin(above)) if not above.all() else len(above)
     return float(side / max(last, 1))

@@ -363,7 +363,7 @@ def label_boxes(grey: npt.NDArray[np.float32], bar: ScaleBar, *, banner_rows: in
     values = stretched(grey)
     rows, columns = values.shape
     on_banner = banner_rows and bar.box.top >= rows - banner_rows
-    reach = max(40, min(160, int(0.1 * rows)))
+    reach = banner_rows if on_banner else max(60, min(160, int(0.1 * rows)))
     first, last = (rows - banner_rows, rows) if on_banner else (0, rows - banner_rows)
     top, bottom = max(first, bar.box.top - reach), min(last, bar.box.bottom + reach)
     left, right = max(0, bar.box.left - reach - 40), min(columns, bar.box.right + 3 * reach)
