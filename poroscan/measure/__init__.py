@@ -74,10 +74,10 @@ _MODULES: tuple[tuple[_Measures, tuple[str, ...]], ...] = (
     (thickness, ()),
     (granulometry, ("walls",)),
     (shape, ()),
-    (radial, ("depth",)),
+    (radial, ()),
+    (structure_factor, ("depth",)),
     (correlation, ()),
     (lineal, ()),
-    (structure_factor, ()),
 )
 
 

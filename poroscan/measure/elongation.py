@@ -20,6 +20,7 @@ import math
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
+import numba
 import numpy as np
 import numpy.typing as npt
 from scipy import ndimage
@@ -92,20 +93,9 @@ def directed_boundary(
     if pores.ndim != 2:
         raise ValueError(f"pores must be 2-D for directions about a centre, not {pores.ndim}-D")
     smooth = ndimage.gaussian_filter(pores.astype(np.float32), _SMOOTHING, mode="nearest", truncate=3.0)
-    y = np.arange(pores.shape[0], dtype=np.float32)[:, None] - np.float32(centre[0])
-    x = np.arange(pores.shape[1], dtype=np.float32)[None, :] - np.float32(centre[1])
-    radius = np.hypot(y, x)
-    keep = usable & (radius > max(inner, 1e-3))
-    down, right = _difference(smooth, 0), _difference(smooth, 1)
-    del smooth
-    n = int(blocks.max(initial=0)) + 1
-    label = blocks[keep]
-    dy, dx, r = down[keep], right[keep], radius[keep]
-    cos, sin = np.broadcast_to(x, pores.shape)[keep] / r, np.broadcast_to(y, pores.shape)[keep] / r
-    along = np.bincount(label, np.abs(dx * cos + dy * sin), n)[1:].astype(np.float64)
-    across = np.bincount(label, np.abs(dy * cos - dx * sin), n)[1:].astype(np.float64)
-    area = np.bincount(label[pores[keep]], minlength=n)[1:].astype(np.float64)
-    return DirectedBoundary(area, along, across)
+    n = int(blocks.max(initial=0))
+    sums = _sums(smooth, pores, usable, blocks, centre[0], centre[1], max(inner, 1e-3), n)
+    return DirectedBoundary(sums[:, 0], sums[:, 1], sums[:, 2])
 
 
 def estimates(section: Section, shared: Shared) -> dict[str, Estimate]:
@@ -142,6 +132,34 @@ def centroid(mask: BoolArray) -> tuple[float, float]:
     return float(by_row @ np.arange(mask.shape[0]) / n), float(by_column @ np.arange(mask.shape[1]) / n)
 
 
-def _difference(smooth: Float32, axis: int) -> Float32:
-    """Central difference; one-sided at the border of the arrays."""
-    return np.asarray(np.gradient(smooth, axis=axis))
+@numba.njit(cache=True)
+def _sums(
+    smooth: Float32,
+    pores: BoolArray,
+    usable: BoolArray,
+    blocks: npt.NDArray[np.int32],
+    row: float,
+    column: float,
+    inner: float,
+    n: int,
+) -> Float:
+    """Pore pixels, |gradient along the radius| and |gradient across it| of each block (central differences)."""
+    rows, columns = smooth.shape
+    out = np.zeros((n, 3))
+    for i in range(rows):
+        for j in range(columns):
+            k = blocks[i, j] - 1
+            if k < 0 or not usable[i, j]:
+                continue
+            y, x = i - row, j - column
+            r = math.sqrt(y * y + x * x)
+            if r <= inner:
+                continue
+            up, down = max(i - 1, 0), min(i + 1, rows - 1)
+            left, right = max(j - 1, 0), min(j + 1, columns - 1)
+            dy = (smooth[down, j] - smooth[up, j]) / max(down - up, 1)
+            dx = (smooth[i, right] - smooth[i, left]) / max(right - left, 1)
+            out[k, 0] += pores[i, j]
+            out[k, 1] += abs(dx * x + dy * y) / r
+            out[k, 2] += abs(dy * x - dx * y) / r
+    return out

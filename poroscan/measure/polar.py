@@ -22,6 +22,7 @@ from dataclasses import dataclass
 from types import MappingProxyType
 from typing import TYPE_CHECKING
 
+import numba
 import numpy as np
 import numpy.typing as npt
 from scipy import optimize, special
@@ -105,14 +106,14 @@ def dipole(
     """
     if particle.ndim != 2:
         raise ValueError(f"particle must be 2-D for a direction in the plane, not {particle.ndim}-D")
-    label = np.ones(np.count_nonzero(particle), np.int32) if blocks is None else blocks[particle]
-    hit = pores[particle]
-    cosine, sine = _angle(particle)
-    n = int(label.max(initial=0)) + 1
-    pixel = _moments(label, cosine, sine, n)
-    pore = np.stack([np.bincount(label[hit], b[hit], n) for b in (np.ones_like(cosine), cosine, sine)], 1)[1:]
+    row, column = centroid(particle)
+    n = 1 if blocks is None else int(blocks.max(initial=0))
+    labels = particle.astype(np.int32) if blocks is None else blocks
+    level = np.zeros((1, 1), np.float32) if expected is None else expected
+    sums = _sums(particle, pores, labels, level, row, column, n)
+    pixel, pore = sums[:, [0, 1, 2, 1, 3, 4, 2, 4, 5]].reshape(n, 3, 3), sums[:, 6:9]
     normal = pixel.sum(axis=0)
-    if not hit.any() or np.linalg.matrix_rank(normal) < 3:
+    if not pores.any() or np.linalg.matrix_rank(normal) < 3:
         return None
     inverse = np.linalg.inv(normal)
     a = inverse @ pore.sum(axis=0)
@@ -122,10 +123,7 @@ def dipole(
     df = float(weights.sum() ** 2 / np.square(weights).sum()) - 1
     cov = np.full((2, 2), math.nan)
     if blocks is not None and df >= LEAST_BLOCKS - 1:
-        level = a[0] * pixel[:, :, 0]
-        if expected is not None:
-            e = expected[particle]
-            level = np.stack([np.bincount(label, e * b, n) for b in (np.ones_like(cosine), cosine, sine)], 1)[1:]
+        level = a[0] * pixel[:, :, 0] if expected is None else sums[:, 9:12]
         influence = (pore - level - pixel[:, :, 1:] @ a[1:]) @ inverse.T  # what each block adds to a0, a1, b1
         relative = (influence[:, 1:] - influence[:, :1] * (a[1:] / a[0])) / a[0]
         # Three coefficients are fitted, so each block's residual is low by its share of all three.
@@ -179,20 +177,43 @@ def amplitude_interval(amplitude: float, sigma: float, *, level: float = 0.95) -
     return solve(observed, 1 - tail), solve(max(observed, 2 * math.log(2)), tail)
 
 
-def _angle(particle: BoolArray) -> tuple[Float, Float]:
-    """cos and sin, at every particle pixel, of the angle about the centroid, counter-clockwise on the screen."""
-    row, column = centroid(particle)
-    y = row - np.arange(particle.shape[0])[:, None]  # rows grow downwards
-    x = np.arange(particle.shape[1])[None, :] - column
-    up, right = np.broadcast_to(y, particle.shape)[particle], np.broadcast_to(x, particle.shape)[particle]
-    radius = np.maximum(np.hypot(right, up), 1e-6)
-    return np.asarray(right / radius), np.asarray(up / radius)
+@numba.njit(cache=True)
+def _sums(
+    particle: BoolArray,
+    pores: BoolArray,
+    blocks: npt.NDArray[np.int32],
+    expected: npt.NDArray[np.float32],
+    row: float,
+    column: float,
+    n: int,
+) -> Float:
+    """Sums over each block of 1, c, s, cc, cs, ss over pixels, of 1, c, s over pores, and of the same times ``expected``.
 
-
-def _moments(label: npt.NDArray[np.int32], cosine: Float, sine: Float, n: int) -> Float:
-    """Sums of products of 1, cos, sin over each block: shape (n − 1, 3, 3)."""
-    one = np.bincount(label, minlength=n).astype(np.float64)
-    products = (cosine, sine, cosine**2, cosine * sine, sine**2)
-    c, s, cc, cs, ss = (np.bincount(label, b, n).astype(np.float64) for b in products)
-    rows = [[one, c, s], [c, cc, cs], [s, cs, ss]]
-    return np.stack([np.stack(row, -1) for row in rows], -2)[1:]
+    c and s are cosine and sine of the angle about the centre, counter-clockwise on the screen (rows grow downwards).
+    """
+    out = np.zeros((n, 12))
+    informed = expected.size == particle.size
+    for i in range(particle.shape[0]):
+        for j in range(particle.shape[1]):
+            k = blocks[i, j] - 1
+            if not particle[i, j] or k < 0:
+                continue
+            x, y = j - column, row - i
+            r = max(math.sqrt(x * x + y * y), 1e-6)
+            c, s = x / r, y / r
+            out[k, 0] += 1
+            out[k, 1] += c
+            out[k, 2] += s
+            out[k, 3] += c * c
+            out[k, 4] += c * s
+            out[k, 5] += s * s
+            if pores[i, j]:
+                out[k, 6] += 1
+                out[k, 7] += c
+                out[k, 8] += s
+            if informed:
+                e = expected[i, j]
+                out[k, 9] += e
+                out[k, 10] += e * c
+                out[k, 11] += e * s
+    return out

@@ -28,6 +28,7 @@ import numpy.typing as npt
 from poroscan.measure import elongation, polar, size_gradient, skin
 from poroscan.measure.part import Part, undefined
 from poroscan.measure.settings import MeasureSettings
+from poroscan.measure.tally import tally
 from poroscan.measure.uncertainty import BlockEstimate, block_linear, block_ratio, estimate_of, threshold_sd
 from poroscan.quantities import Curve, Estimate
 from poroscan.section import BoolArray, Circle, Section
@@ -36,6 +37,7 @@ if TYPE_CHECKING:
     from poroscan.measure.shared import Shared
 
 Float = npt.NDArray[np.float64]
+Int16 = npt.NDArray[np.int16]
 Int32 = npt.NDArray[np.int32]
 
 #: Classes of equal area (volume) into which the normalised radius is cut; core, shell and rings are made up of whole classes.
@@ -89,7 +91,7 @@ class RingTable:
 
 def radius_classes(
     depth: npt.NDArray[np.float32], particle: BoolArray, *, circle: Circle | None = None, classes: int = CLASSES
-) -> Int32:
+) -> Int16:
     """Class of the normalised radius of every pixel: classes of equal area (volume), 0 innermost; −1 outside.
 
     Parameters
@@ -107,35 +109,41 @@ def radius_classes(
     ValueError
         If no outline is in sight (infinite depth) and no circle is given.
     """
-    out = np.full(particle.shape, -1, np.int32)
     if circle is not None:
         rows, columns = np.ogrid[: particle.shape[0], : particle.shape[1]]
-        share = ((rows - circle.row) ** 2 + (columns - circle.column) ** 2) / circle.radius**2
-        out[particle] = np.minimum(share[particle] * classes, classes - 1).astype(np.int32)
+        share = (((rows - circle.row) / circle.radius) ** 2).astype(np.float32)
+        share = share + (((columns - circle.column) / circle.radius) ** 2).astype(np.float32)
+        share *= classes
+        out = np.minimum(share, classes - 1, out=share).astype(np.int16)
+        out[~particle] = -1
         return out
-    inside = depth[particle]
-    if not np.isfinite(inside).all():
+    deepest = float(depth.max())
+    if not math.isfinite(deepest):
         raise ValueError("depth must be finite inside particle: no outline is in sight (give the fitted circle)")
     # A fine histogram of depths replaces a sort; ties share the middle of their common rank.
     fine = 16 * CLASSES
-    index = (inside * np.float32((fine - 1) / max(float(inside.max()), 1e-6))).astype(np.int32)
-    counts = np.bincount(index, minlength=fine)
-    deeper = inside.size - np.cumsum(counts) + counts / 2
-    table = np.minimum(deeper * (classes / inside.size), classes - 1).astype(np.int32)
-    out[particle] = table[index]
+    index = (depth * np.float32((fine - 1) / max(deepest, 1e-6))).astype(np.uint16)
+    counts = _histogram(index, fine)
+    counts[0] -= particle.size - np.count_nonzero(particle)  # pixels outside have depth 0
+    deeper = counts.sum() - np.cumsum(counts) + counts / 2
+    table = np.minimum(deeper * (classes / counts.sum()), classes - 1).astype(np.int16)
+    out = table[index]
+    out[~particle] = -1
     return out
 
 
-def ring_table(pores: BoolArray, blocks: Int32, classes: Int32, *, ndim: int, number: int = CLASSES) -> RingTable:
+def _histogram(index: npt.NDArray[np.uint16], size: int) -> npt.NDArray[np.int64]:
+    """Counts of small integers, in slabs: counting by index costs eight bytes per number otherwise."""
+    counts = np.zeros(size, np.int64)
+    for slab in np.array_split(np.ravel(index), max(1, index.size // 2**18)):
+        counts += np.bincount(slab, minlength=size)
+    return counts
+
+
+def ring_table(pores: BoolArray, blocks: Int32, classes: Int16, *, ndim: int, number: int = CLASSES) -> RingTable:
     """Count pores and pixels by block (1…n) and class of the normalised radius."""
-    inside = (classes >= 0) & (blocks > 0)
-    code = blocks[inside] - 1
-    n = int(code.max(initial=0)) + 1
-    code = code * number + classes[inside]
-    pixels = np.bincount(code, minlength=n * number).reshape(n, number)
-    hits = np.bincount(code[pores[inside]], minlength=n * number).reshape(n, number)
-    radius = (np.arange(number + 1) / number) ** (1 / ndim)
-    return RingTable(hits.astype(np.float64), pixels.astype(np.float64), radius, ndim)
+    hits, pixels = tally(pores, blocks, classes, number=number)
+    return RingTable(hits, pixels, (np.arange(number + 1) / number) ** (1 / ndim), ndim)
 
 
 def trend(table: RingTable) -> Float:

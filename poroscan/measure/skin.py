@@ -18,9 +18,10 @@ import numpy as np
 import numpy.typing as npt
 
 from poroscan.measure.settings import MeasureSettings
+from poroscan.measure.tally import tally
 from poroscan.measure.uncertainty import LEAST_BLOCKS, block_ratio, estimate_of
 from poroscan.quantities import Curve, Estimate
-from poroscan.section import BoolArray, Section
+from poroscan.section import Section
 
 Float = npt.NDArray[np.float64]
 
@@ -52,21 +53,18 @@ class DepthProfile:
 
 def depth_profile(section: Section, depth: npt.NDArray[np.float32], blocks: npt.NDArray[np.int32]) -> DepthProfile:
     """Count pores and pixels by block and distance from the outline (minus-sampling where the frame cuts)."""
-    inside = section.particle & (blocks > 0)
-    if section.touches_frame:
-        inside &= depth <= _frame_distance(section.particle.shape)
-    d = depth[inside]
+    deepest = float(depth.max(initial=0))
     edges = [0.0]
-    while d.size and edges[-1] <= d.max():
+    while edges[-1] <= deepest:
         edges.append(edges[-1] + max(1.0, _GROWTH * edges[-1]))
-    n = len(edges) - 1
-    step = np.digitize(d, np.array(edges[1:], np.float32)) if d.size else np.zeros(0, np.intp)
-    code = (blocks[inside] - 1) * n + step
-    m = int(blocks.max())
-    shape = (m, n)
-    pixels = np.bincount(code, minlength=m * n).reshape(shape)
-    pores = np.bincount(code[section.pores[inside]], minlength=m * n).reshape(shape)
-    return DepthProfile(pores.astype(np.float64), pixels.astype(np.float64), np.array(edges))
+    # Depths fall into cells of 1/8 pixel, whose limits hold all edges of the zone where steps are one pixel wide.
+    table = np.searchsorted(edges[1:], (np.arange(int(8 * deepest) + 2) + 0.5) / 8).astype(np.int16)
+    step = table[(depth * np.float32(8)).astype(np.int32)]
+    step[~section.particle] = -1
+    if section.touches_frame:
+        step[depth > _frame_distance(section.particle.shape)] = -1
+    pores, pixels = tally(section.pores, blocks, step, number=len(edges) - 1)
+    return DepthProfile(pores, pixels, np.array(edges))
 
 
 def thickness(pores: Float, pixels: Float, middle: Float, *, level: float) -> Float:
@@ -176,8 +174,3 @@ def _frame_distance(shape: tuple[int, ...]) -> npt.NDArray[np.float32]:
         line = np.minimum(np.arange(n) + 0.5, n - 0.5 - np.arange(n)).astype(np.float32)
         out = np.minimum(out, line.reshape([-1 if a == axis else 1 for a in range(len(shape))]))
     return out
-
-
-def frame_safe(section: Section, depth: npt.NDArray[np.float32]) -> BoolArray:
-    """Particle pixels whose nearest outline is surely the visible one: nearer to it than to the frame."""
-    return section.particle & (depth <= _frame_distance(section.particle.shape))

@@ -28,7 +28,8 @@ from scipy import special
 
 from poroscan.measure.part import Part, undefined
 from poroscan.measure.settings import MeasureSettings
-from poroscan.measure.two_point import check_masks
+from poroscan.measure.tally import tally
+from poroscan.measure.two_point import check_masks, outer_sum, slabs
 from poroscan.quantities import Curve, Estimate
 from poroscan.section import Section
 
@@ -140,11 +141,13 @@ def structure_factor(
         return None
     phi = hits / n
     contrast = pores.astype(np.float32)
-    contrast -= np.float32(phi) * particle if expected is None else np.where(particle, expected, np.float32(0))
+    np.subtract(contrast, np.float32(phi) if expected is None else expected, out=contrast, where=particle)
     shape = [scipy.fft.next_fast_len(k, real=True) for k in particle.shape]
     spectrum = scipy.fft.rfftn(contrast, s=shape)
+    del contrast
     power = np.square(spectrum.real)
     power += np.square(spectrum.imag)
+    del spectrum
     size = float(n) ** (1 / particle.ndim)
     q, s, modes = _rings(power, shape, size)
     return StructureFactor(q, s / (n * phi * (1 - phi)), modes * (n / math.prod(shape)), size)
@@ -204,11 +207,11 @@ def _expected(section: Section, settings: MeasureSettings, shared: Shared) -> np
     deepest = float(depth.max())
     if section.view == "interior" or not 0 < deepest < math.inf:
         return None
-    ring = np.minimum(depth * np.float32(settings.radial_bins / deepest), settings.radial_bins - 1).astype(np.int32)
-    ring[~section.particle] = settings.radial_bins
-    pixels = np.bincount(ring.ravel(), minlength=settings.radial_bins + 1)
-    hits = np.bincount(ring[section.pores], minlength=settings.radial_bins + 1)
-    profile = (hits / np.maximum(pixels, 1)).astype(np.float32)
+    n = settings.radial_bins
+    ring = np.minimum(depth * np.float32(n / deepest), np.float32(n - 1)).astype(np.int16)
+    ring[~section.particle] = n
+    hits, pixels = tally(section.pores, shared.blocks, ring, number=n + 1)
+    profile = (hits.sum(axis=0) / np.maximum(pixels.sum(axis=0), 1)).astype(np.float32)
     profile[-1] = 0
     return profile[ring]
 
@@ -216,28 +219,22 @@ def _expected(section: Section, settings: MeasureSettings, shared: Shared) -> np
 def _rings(power: npt.NDArray[np.float32], shape: list[int], size: float) -> tuple[Float, Float, Float]:
     """Mean wave number, mean power and number of half-space modes of each ring."""
     axes = [2 * math.pi * scipy.fft.fftfreq(n) for n in shape[:-1]] + [2 * math.pi * scipy.fft.rfftfreq(shape[-1])]
-    square = np.zeros((1,) * len(axes), np.float32)
-    for a, f in enumerate(axes):
-        square = square + (f.astype(np.float32) ** 2).reshape([-1 if b == a else 1 for b in range(len(axes))])
-    q = np.sqrt(square, out=square)
     edges = _edges(2 * math.pi / size)
     # Rings are found through a fine table of q, which is far quicker than a search for every mode.
     fine = edges[0] / 4
-    table = np.searchsorted(edges, (np.arange(int(q.max() / fine) + 2) + 0.5) * fine).astype(np.int16)
-    ring = table[(q * np.float32(1 / fine)).astype(np.int32)].ravel()
-    weight = np.full(power.shape[-1], 1.0, np.float32)
+    table = np.searchsorted(edges, (np.arange(int(math.pi * math.sqrt(len(axes)) / fine) + 2) + 0.5) * fine)
     # Half-space: the columns of zero (and of the highest) frequency hold every mode twice.
+    weight = np.ones(power.shape[-1])
     weight[0] = 0.5
     if shape[-1] % 2 == 0:
         weight[-1] = 0.5
-    count = np.zeros(edges.size + 1)
-    total, length = count.copy(), count.copy()
-    power *= weight
-    total += np.bincount(ring, power.ravel(), edges.size + 1)
-    weights = np.broadcast_to(weight, power.shape).ravel()
-    count += np.bincount(ring, weights, edges.size + 1)
-    q *= weight
-    length += np.bincount(ring, q.ravel(), edges.size + 1)
+    total, length, count = np.zeros((3, edges.size + 1))
+    for slab in slabs(power.shape[0], power[0].size):
+        q = np.sqrt(outer_sum([np.square(axes[0][slab]), *(np.square(f) for f in axes[1:])]))
+        ring = table[(q / fine).astype(np.intp)].ravel()
+        total += np.bincount(ring, (power[slab] * weight).ravel(), edges.size + 1)
+        count += np.bincount(ring, np.broadcast_to(weight, q.shape).ravel(), edges.size + 1)
+        length += np.bincount(ring, (q * weight).ravel(), edges.size + 1)
     inner = slice(1, -1)  # below half a mode lies q = 0; beyond π rings are not complete
     good = count[inner] > 0
     count, total, length = count[inner][good], total[inner][good], length[inner][good]

@@ -85,7 +85,7 @@ class TwoPoint:
 
     def distance(self) -> Float:
         """Length of every lag in pixels, in the layout of ``hits``."""
-        return np.sqrt(_outer_sum([np.square(lags) for lags in self.lags()]))
+        return np.sqrt(outer_sum([np.square(lags) for lags in self.lags()]))
 
 
 @dataclass(frozen=True, eq=False)
@@ -161,8 +161,8 @@ def radial_average(counts: TwoPoint, *, max_lag: float | None = None) -> RadialC
     sums = np.zeros((3, top + 2))
     weight = np.broadcast_to(counts.multiplicity(), counts.pairs.shape)
     square = [np.square(lags) for lags in counts.lags()]
-    for slab in _slabs(counts.pairs.shape[0], counts.pairs[0].size):
-        distance = np.sqrt(_outer_sum([square[0][slab], *square[1:]]))
+    for slab in slabs(counts.pairs.shape[0], counts.pairs[0].size):
+        distance = np.sqrt(outer_sum([square[0][slab], *square[1:]]))
         ring = np.minimum(np.rint(distance).astype(np.intp), top + 1).ravel()
         pairs = (counts.pairs[slab] * weight[slab]).astype(np.float64)
         sums[0] += np.bincount(ring, pairs.ravel(), top + 2)
@@ -214,7 +214,7 @@ def _autocorrelation(mask: BoolArray, *, reach: tuple[int, ...], size: tuple[int
     last = mask.ndim - 1
     others = tuple(range(last))
     rows = np.empty((*mask.shape[:-1], size[-1] // 2 + 1), np.complex128)
-    for slab in _slabs(mask.shape[0], rows[0].size):
+    for slab in slabs(mask.shape[0], rows[0].size):
         rows[slab] = scipy.fft.rfft(mask[slab].astype(np.float64), n=size[-1], axis=last)
     lags = tuple(n + 1 if a == last - 1 else 2 * n + 1 for a, n in enumerate(reach[:-1]))
     fits = all(n <= m for n, m in zip(lags, mask.shape[:-1], strict=True))
@@ -228,7 +228,7 @@ def _autocorrelation(mask: BoolArray, *, reach: tuple[int, ...], size: tuple[int
         half[..., chunk] = np.conjugate(_keep(scipy.fft.rfftn(power, axes=others), reach))
     n = reach[-1]
     out = np.empty((*lags, 2 * n + 1), np.int32 if mask.size < 2**30 else np.int64)
-    for slab in _slabs(lags[0], half[0].size):
+    for slab in slabs(lags[0], half[0].size):
         full = scipy.fft.irfft(half[slab], n=size[-1], axis=last)
         full /= math.prod(size[:-1])
         np.rint(full, out=full)
@@ -237,7 +237,7 @@ def _autocorrelation(mask: BoolArray, *, reach: tuple[int, ...], size: tuple[int
     return out
 
 
-def _slabs(length: int, each: int) -> Iterator[slice]:
+def slabs(length: int, each: int) -> Iterator[slice]:
     """Slices of the first axis with about a quarter of a million numbers each."""
     step = max(1, 2**18 // max(each, 1))
     return (slice(start, min(start + step, length)) for start in range(0, length, step))
@@ -252,7 +252,7 @@ def _keep(spectrum: npt.NDArray[np.complex128], reach: tuple[int, ...]) -> npt.N
     return np.concatenate([spectrum[planes - n :, : m + 1], spectrum[: n + 1, : m + 1]])
 
 
-def _outer_sum(axes: list[Float]) -> Float:
+def outer_sum(axes: list[Float]) -> Float:
     """Sum of one value per axis at every point of the grid."""
     out: Float = np.zeros((1,) * len(axes))
     for a, values in enumerate(axes):
