@@ -60,13 +60,17 @@ def enter_from_edge(mixture: Mixture, gap: FloatArray, edge: str) -> FloatArray 
         potentials = site_potentials(mixture, np.where(np.isinf(gap), -2000.0, gap))[absent]
     # both phases carry the same logarithm in `potentials`: what is left is the difference in the trace's surroundings
     preference = float((potentials[0] - potentials[1]) * mixture.sizes[absent])
-    amount = np.log(_EDGE_START / mixture.sizes[absent])
-    logs = np.array(gap)
-    logs[absent] = amount + np.minimum(0.0, [-preference, preference])
-    start = np.exp(logs)
-    heading = np.zeros((3, 2))
-    heading[absent, int(start[absent, 1] > start[absent, 0])] = 1.0
-    return solve_phases(mixture, logs, along_tangent(start, heading, 0.0))
+    for share in (1.0, 1e-2, 1e-4):  # a gap that is all but closed ends within the first step
+        amount = np.log(share * _EDGE_START / mixture.sizes[absent])
+        logs = np.array(gap)
+        logs[absent] = amount + np.minimum(0.0, [-preference, preference])
+        start = np.exp(logs)
+        heading = np.zeros((3, 2))
+        heading[absent, int(start[absent, 1] > start[absent, 0])] = 1.0
+        solved = solve_phases(mixture, logs, along_tangent(start, heading, 0.0))
+        if solved is not None and separation(solved) > 0.5 * separation(gap):
+            return solved
+    return None
 
 
 def trace(

@@ -18,6 +18,7 @@ Constraint = Callable[[FloatArray], tuple[float, FloatArray]]
 
 #: Largest difference of molecular chemical potentials between phases that counts as coexistence, kT.
 TOLERANCE = 1e-10
+_ROUNDING_PER_SITE = 5e-15  # of a potential per site; counts N times in that of a molecule
 
 _STEPS = 40
 _LARGEST_LOG_STEP = 0.7  # of a component that is no trace
@@ -71,7 +72,8 @@ def _iterate(
         if moved < 1e-12 or (moved < 1e-7 and potential_gap(mixture, logs) < 1e-12):
             break
     sums = np.exp(logs).sum(axis=0)
-    settled = potential_gap(mixture, logs) < TOLERANCE and np.abs(sums - 1).max() < 1e-10
+    tolerance = max(TOLERANCE, _ROUNDING_PER_SITE * float(mixture.sizes.max()))
+    settled = potential_gap(mixture, logs) < tolerance and np.abs(sums - 1).max() < 1e-10
     if settled and constraint is not None:
         settled = abs(constraint(logs)[0]) < 1e-8
     return logs if settled else None

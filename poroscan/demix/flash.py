@@ -19,6 +19,7 @@ from poroscan.errors import SimulationError
 #: How far a one-phase answer may be undercut on a coarse grid before a missed region is suspected, kT per site.
 _MISSED = 1e-8
 _ON_EDGE = 1e-12
+_ROUNDING = 1e-9
 
 
 @dataclass(frozen=True)
@@ -120,6 +121,9 @@ def _result(diagram: PhaseDiagram, feed: FloatArray, logs: FloatArray) -> Flash:
     logs = logs[:, np.argsort(-logs[2], kind="stable")]
     phases = np.exp(logs)
     amounts = np.linalg.lstsq(np.vstack([phases, np.ones(phases.shape[1])]), np.append(feed, 1.0))[0]
+    if amounts.min() < -_ROUNDING:
+        raise SimulationError(f"the phases found for the feed {feed.round(6).tolist()} do not add up to it")
+    amounts = np.maximum(amounts, 0.0)  # a feed on the binodal itself: rounding only
     if logs.shape[1] == 1:
         residual = 0.0
     else:

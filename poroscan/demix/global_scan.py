@@ -15,6 +15,7 @@ from scipy.spatial import ConvexHull
 from poroscan.demix.interaction import FloatArray
 from poroscan.demix.mixture import Mixture, excess, ideal_energy, scaled_curvature
 from poroscan.demix.spinodal import composition
+from poroscan.errors import SimulationError
 
 #: How far the free energy may lie under the tangent plane by rounding, kT per site.
 UNDERCUT = 1e-10
@@ -61,7 +62,13 @@ class EnergyTable:
 
 
 def tabulate(mixture: Mixture) -> EnergyTable:
-    """Free energy of a mixture over the triangle."""
+    """Free energy of a mixture over the triangle.
+
+    Raises
+    ------
+    SimulationError
+        Where an interaction parameter is not a number somewhere in the triangle.
+    """
     tail = np.geomspace(1e-7, 5e-3, 14)
     inner = np.linspace(0, 1, _SHARES)[1:-1]
     share = np.concatenate([[0.0], tail, inner, 1 - tail[::-1], [1.0]])
@@ -74,7 +81,18 @@ def tabulate(mixture: Mixture) -> EnergyTable:
     phi = np.concatenate([phi.reshape(3, -1), [[0.0], [0.0], [1.0]]], axis=1)
     kept = np.nonzero(np.append(keep.ravel(), True))[0]
     energy = ideal_energy(mixture, phi) + excess(mixture, phi)[0]
+    _refuse_gaps(phi, energy)
     return EnergyTable(phi, energy, kept)
+
+
+def _refuse_gaps(phi: FloatArray, energy: FloatArray) -> None:
+    bad = ~np.isfinite(energy)
+    if bad.any():
+        n, s, p = phi[:, np.argmax(bad)]
+        raise SimulationError(
+            f"the free energy is not a number at phi_n={n:.4g}, phi_s={s:.4g}, phi_p={p:.4g} (and at {bad.sum() - 1} more of "
+            f"{bad.size} compositions): mend the interaction parameter that depends on composition"
+        )
 
 
 def hull_chords(mixture: Mixture, table: EnergyTable) -> FloatArray:

@@ -161,10 +161,11 @@ def find_phase_diagram(mixture: Mixture) -> PhaseDiagram:
     Raises
     ------
     SimulationError
-        A family of tie lines could not be followed to its end; no part of the diagram is returned then.
+        An interaction parameter is not a number somewhere in the triangle, or a family of tie lines could not be followed
+        to its end; no part of the diagram is returned then.
     """
-    spinodal = find_spinodal(mixture)
     regions, triangles = find_regions(mixture)
+    spinodal = find_spinodal(mixture)
     regions = tuple(_with_plaits(mixture, region, spinodal.plaits) for region in regions)
     ends = [plait for region in regions for plait in (region.first_plait, region.last_plait) if plait is not None]
     others = [phi for phi in spinodal.plaits if not any(np.abs(phi - end).max() < _SAME for end in ends)]
