@@ -22,6 +22,7 @@ from poroscan.errors import SettingsError
 from poroscan.intake.settings import IntakeSettings
 from poroscan.measure.settings import MeasureSettings
 from poroscan.report.settings import ReportSettings
+from poroscan.report.toml_text import toml_text
 from poroscan.segment.settings import SegmentSettings
 
 #: Keys that leave every number in the tables as it is.
@@ -120,13 +121,7 @@ def make_recipe(
 
 def recipe_to_toml(recipe: Recipe) -> str:
     """The recipe as TOML text with every key, to start one's own from."""
-    plain = recipe.plain()
-    lines = [f"{k} = {_toml(v)}" for k, v in plain.items() if not isinstance(v, dict) and v is not None]
-    for table, values in plain.items():
-        if isinstance(values, dict):
-            lines += ["", f"[{table}]"]
-            lines += [f"{k} = {_toml(v)}" if v is not None else f"# {k} = (not set)" for k, v in values.items()]
-    return "\n".join(lines) + "\n"
+    return toml_text(recipe.plain())
 
 
 def differences(one: Mapping[str, Any], two: Mapping[str, Any]) -> list[str]:
@@ -198,11 +193,3 @@ def _flat(data: Mapping[str, Any], prefix: tuple[str, ...] = ()) -> Iterator[tup
             yield from _flat(value, (*prefix, key))
         else:
             yield (*prefix, key), value
-
-
-def _toml(value: Any) -> str:
-    if isinstance(value, str):
-        return json.dumps(value, ensure_ascii=False)
-    if isinstance(value, list):
-        return "[" + ", ".join(_toml(v) for v in value) + "]"
-    return json.dumps(value)

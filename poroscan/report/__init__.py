@@ -7,5 +7,6 @@ words       sentences for people
 picture     pictures with outline and pores drawn on them
 svg         line charts as compact inline SVG
 figures     the figures of batches and particles
+toml_text   the recipe as a user would write it
 page        the page
 """

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import base64
-import json
 from collections import Counter
 from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
@@ -18,6 +17,7 @@ from poroscan.report import words
 from poroscan.report.figures import SHOWN, Curves, Units, batch_comparison, batch_figures, particle_figures
 from poroscan.report.settings import ReportSettings
 from poroscan.report.source import Key, RunData, curve_units, read_curves, read_run_data
+from poroscan.report.toml_text import toml_text
 
 #: Columns of the table of batches.
 _SUMMARY = ("porosity", "pore_d50_um", "wall_d50_um", "skin_thickness_um", "radial_asymmetry", "equivalent_diameter_um")
@@ -117,7 +117,7 @@ def _context(data: RunData, shown: _Shown, settings: ReportSettings) -> dict[str
     return {
         "title": settings.title,
         "run": data.run,
-        "recipe": json.dumps(data.run["recipe"], ensure_ascii=False, indent=2),
+        "recipe": toml_text(data.run["recipe"]),
         "totals": (
             f"{words.count(len(data.batches), 'batch', 'batches')}, {words.count(len(data.inputs), 'input')}, "
             f"{words.count(measured, 'particle')} measured"
