@@ -44,6 +44,7 @@ COMMANDS: tuple[str, ...] = (
     "report",
     "render",
     "phases",
+    "score",
 )
 
 for _name in COMMANDS:
