@@ -29,7 +29,7 @@ def folder_name(batch: str, image: str) -> str:
     >>> folder_name("b1", "bead_01.tif")
     'b1__bead_01.tif'
     >>> folder_name("b1", "Bead 1.tif")
-    'b1__bead_1.tif-fe60567a'
+    'b1__bead_1.tif-04de69c8'
     """
     name = f"{batch}__{image}" if batch else image
     plain = re.sub(r"[^a-z0-9._-]+", "_", name.lower()).lstrip("._-")[:_LONGEST].rstrip("._-")
