@@ -131,9 +131,11 @@ def _edges(bottom: npt.NDArray[np.float32], strip: Strip, start: int) -> list[in
 
 def _jumps(share: npt.NDArray[np.float64], row: int) -> bool:
     """Few flat pixels in the rows above (in more of them than a thick bar takes), many from this row on."""
+    if share[row] < 0.5 or share[row - 1] >= share[row] - 0.2:
+        return False
     above = max(float(np.median(share[max(0, row - 4) : row])), float(np.quantile(share[max(0, row - 24) : row], 0.75)))
     quiet = float(np.median(share[row : row + 4]))
-    return quiet >= _QUIET and share[row] >= 0.5 and above <= quiet - 0.35 and share[row - 1] < share[row] - 0.2
+    return quiet >= _QUIET and above <= quiet - 0.35
 
 
 def _is_line(bottom: npt.NDArray[np.float32], strip: Strip, row: int) -> bool:
@@ -183,7 +185,7 @@ def _banner_without_edge(bottom: npt.NDArray[np.float32], strip: Strip, start: i
     """
     values = bottom[start:]
     contrast = float(np.abs(values - strip.levels[0]).max()) if values.size else 0.0
-    if values.shape[0] <= _MIN_ROWS or contrast < 0.3:
+    if values.shape[0] <= _MIN_ROWS or contrast < 0.3 or _equal(values[-_MIN_ROWS:], strip) < _EQUAL:
         return 0
     ink = np.abs(values - strip.levels[0]) > 0.5 * contrast
     text = letters(ink_boxes(ink), rows=values.shape[0])

@@ -20,7 +20,8 @@ from poroscan.intake.scale_label import parse_label, plausible
 LEAST_LETTER_HEIGHT = 14
 
 _LEAST_CONFIDENCE = 0.5
-_MOST_LINES = 8
+_MOST_LINES = 8  # read around one bar
+_MOST_READS = 16  # read in one picture, at some 30 ms each
 
 
 @dataclass(frozen=True)
@@ -61,34 +62,50 @@ def read_scale_bar(
     banner_rows
         Rows of the banner at its bottom.
     stated_um
-        Length that the bar stands for, where the user says so; the label is not read then.
+        Length that the bar stands for, where the user says so; a label that says the same tells which stroke is the bar.
     use_ocr
         Whether the label is read.
     """
     bars = find_scale_bars(grey, banner_rows=banner_rows)
     if not bars:
         return BarReading()
+    found = _read_labels(stretched(grey), bars, banner_rows) if use_ocr and ocr.available() else {}
     if stated_um is not None:
-        return _reading(bars[0], stated_um, "as stated", doubtful=False)
-    if use_ocr and ocr.available():
-        values = stretched(grey)
-        for bar in bars:
-            found = _label_of(values, bar, banner_rows)
-            if found is not None:
-                um, text, box = found
-                return _reading(bar, um, text, doubtful=box.height < LEAST_LETTER_HEIGHT)
+        labelled = next(
+            (bar for bar in bars if bar in found and math.isclose(found[bar][0], stated_um, rel_tol=0.02)), None
+        )
+        return _reading(labelled or bars[0], stated_um, "as stated", doubtful=False)
+    for bar, (um, text, box) in found.items():
+        return _reading(bar, um, text, doubtful=box.height < LEAST_LETTER_HEIGHT)
     bar = bars[0]
-    if not banner_rows and bar.kind == "plain":
-        return BarReading()  # a pale straight edge of the specimen looks the same; without a label it says nothing
     note = f"a scale bar of {bar.length:.1f} pixels was found, but its label was not read"
     return BarReading(bar, flags=("scale_label_unread",), notes=(note,))
 
 
-def _label_of(values: npt.NDArray[np.float32], bar: ScaleBar, banner_rows: int) -> tuple[float, str, Box] | None:
+def _read_labels(
+    values: npt.NDArray[np.float32], bars: list[ScaleBar], banner_rows: int
+) -> dict[ScaleBar, tuple[float, str, Box]]:
+    """Labels by bar, the likeliest bar first: length, text, place. Reading ends at the first label."""
+    reads = 0
+    for bar in bars:
+        boxes = _possible_labels(values, bar, banner_rows)[: max(0, _MOST_READS - reads)]
+        reads += len(boxes)
+        found = _label_of(values, bar, boxes)
+        if found is not None:
+            return {bar: found}
+    return {}
+
+
+def _possible_labels(values: npt.NDArray[np.float32], bar: ScaleBar, banner_rows: int) -> list[Box]:
+    """Lines of letters that may be the label of a bar: whole lines, and in the gap of a broken bar only what stands there."""
     lines = boxes = label_boxes(values, bar, banner_rows=banner_rows)
     if bar.gap is not None:  # what breaks the bar is its label, or it is no bar
         boxes = [b for b in boxes if b.left >= bar.gap[0] - 2 and b.right <= bar.gap[1] + 2]
-    for box in [b for b in boxes if b.width >= b.height and not is_piece(b, lines)][:_MOST_LINES]:
+    return [b for b in boxes if b.width >= b.height and not is_piece(b, lines)][:_MOST_LINES]
+
+
+def _label_of(values: npt.NDArray[np.float32], bar: ScaleBar, boxes: list[Box]) -> tuple[float, str, Box] | None:
+    for box in boxes:
         try:
             text, confidence = ocr.read_line(_crop(values, box, bar))
         except MissingExtraError:

@@ -19,7 +19,9 @@ from poroscan.intake.lettering import Box, ink_boxes, letters, text_lines
 LENGTH_SD = float(np.sqrt(2 / 12))
 
 _LEAST_LENGTH = 0.02  # of the picture's width
+_LEAST_IN_PICTURE = 0.035  # likewise, for bars that do not lie on a banner
 _MOST_LENGTH = 0.98
+_EVEN = 0.06  # standard deviation of the grey along a drawn stroke
 _MOST_THICKNESS = 0.25  # of the bar's length
 _SHARES = (0.5, 0.75, 0.3)  # of the strip's contrast at which strokes are cut out
 
@@ -131,7 +133,24 @@ def _in_picture(values: npt.NDArray[np.float32]) -> list[ScaleBar]:
     bars: list[ScaleBar] = []
     for ink in (values >= 0.9, values <= 0.08, values >= 0.75, values <= 0.16):
         bars += _bars(values, ink, values.shape)
-    return [bar for bar in bars if bar.kind != "plain" or bar.box.height >= 2]
+    return [bar for bar in bars if bar.box.width >= _LEAST_IN_PICTURE * values.shape[1] and _is_drawn(values, bar)]
+
+
+def _is_drawn(values: npt.NDArray[np.float32], bar: ScaleBar) -> bool:
+    """One even grey along the stroke, and another one above and below: what a specimen hardly ever shows."""
+    box, pieces = bar.box, [(bar.box.left, bar.box.right)]
+    if bar.gap is not None:
+        pieces = [(box.left, bar.gap[0]), (bar.gap[1], box.right)]
+    for left, right in pieces:
+        inner = slice(left + 2, right - 2)
+        if values[(box.top + box.bottom - 1) // 2, inner].std() > _EVEN:
+            return False
+        if bar.kind in ("ticks", "ruler", "broken"):
+            inner = slice(left + 8, max(left + 9, right - 8))
+        outside = [values[row, inner] for row in (box.top - 3, box.bottom + 2) if 0 <= row < values.shape[0]]
+        if len(outside) < 2 or min(float(np.mean(np.abs(o - bar.level) > 0.2)) for o in outside) < 0.7:
+            return False
+    return True
 
 
 def _bars(values: npt.NDArray[np.float32], ink: npt.NDArray[np.bool_], shape: tuple[int, ...]) -> list[ScaleBar]:
@@ -293,7 +312,7 @@ def _tick_width(ink: npt.NDArray[np.bool_], s: Box) -> int:
     for row in (s.top - 2, s.bottom + 1):
         if 0 <= row < ink.shape[0]:
             near = ink[row, s.left : s.left + 12]
-            widths.append(int(np.argmin(near)) if near[:2].any() and not near.all() else 0)
+            widths.append((len(near) if near.all() else int(np.argmin(near))) if near[:2].any() else 0)
     return max(widths, default=0)
 
 

@@ -175,6 +175,18 @@ def test_a_stated_length_needs_no_reader(rng: np.random.Generator, tmp_path) -> 
     assert any("250.0 pixels was found, but its label was not read" in note for note in unread.notes)
 
 
+@pytest.mark.parametrize("read", [False, True])
+def test_a_stated_length_goes_to_the_drawn_bar_not_to_the_specimen(rng: np.random.Generator, read: bool) -> None:
+    # pores, their walls and the margin of the label's box make strokes too
+    for kind in ("porous", "disc"):
+        for ink, box in ((255, 10), (0, 240)):
+            picture = texture(500, 700, rng, kind=kind, noise=4)
+            drawn = burnt_in(picture, length=138, label="200 µm", um=200, ink=ink, box=box, thick=5, below=False)
+            reading = read_scale_bar(_grey(drawn.grey), banner_rows=0, stated_um=200.0, use_ocr=read)
+            assert reading.candidate is not None
+            assert reading.candidate.um == pytest.approx(200 / 138, rel=0.005)
+
+
 def test_without_the_extra_the_bar_is_flagged(rng: np.random.Generator, monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.setattr(ocr, "_model_path", lambda: None)
     ocr._model.cache_clear()
