@@ -12,6 +12,7 @@ import zlib
 import imagecodecs
 import numpy as np
 import numpy.typing as npt
+from scipy.ndimage import find_objects
 from skimage.transform import resize
 
 from poroscan.section import BoolArray
@@ -52,7 +53,7 @@ def draw(
     pores
         Pore mask; same shape.
     numbers
-        Whether each particle carries its number at its centroid.
+        Whether each particle carries its number.
 
     Returns
     -------
@@ -176,16 +177,13 @@ def _outline(labels: npt.NDArray[np.integer], *, thickness: int) -> BoolArray:
 
 
 def _numbers(labels: npt.NDArray[np.integer]) -> npt.NDArray[np.uint8]:
-    """Where the number of each particle is drawn at its centroid: ``_DOT`` for the digits, ``_GROUND`` around them."""
+    """Where the number of each particle is drawn, in its middle: ``_DOT`` for the digits, ``_GROUND`` around them."""
     marks = np.zeros(labels.shape, dtype=np.uint8)
     size = max(2, max(labels.shape) // 150)
-    count = int(labels.max(initial=0))
-    area = np.bincount(labels.ravel(), minlength=count + 1)
-    rows = np.bincount(labels.ravel(), np.repeat(np.arange(labels.shape[0]), labels.shape[1]), minlength=count + 1)
-    cols = np.bincount(labels.ravel(), np.tile(np.arange(labels.shape[1]), labels.shape[0]), minlength=count + 1)
-    for k in range(1, count + 1):
-        if area[k]:
-            _stamp(marks, str(k), round(rows[k] / area[k]), round(cols[k] / area[k]), size)
+    for number, place in enumerate(find_objects(labels), start=1):
+        if place is not None:
+            row, column = ((side.start + side.stop) // 2 for side in place)
+            _stamp(marks, str(number), row, column, size)
     return marks
 
 
