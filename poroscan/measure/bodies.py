@@ -17,6 +17,8 @@ SPIE 1769 (1992) 292 (dynamics of basins).
 
 from __future__ import annotations
 
+import math
+
 import numba
 import numpy as np
 import numpy.typing as npt
@@ -114,14 +116,17 @@ def _flood(order, distance, shape, keep):  # type: ignore[no-untyped-def]
         x = i % columns
         y = i // columns % rows
         z = i // (columns * rows)
-        own = 0
+        own, steepest, uphill = 0, np.float32(-1.0), 0
         for dz in range(-1 if z > 0 else 0, 2 if z < planes - 1 else 1):
             for dy in range(-1 if y > 0 else 0, 2 if y < rows - 1 else 1):
                 for dx in range(-1 if x > 0 else 0, 2 if x < columns - 1 else 1):
-                    label = labels[i + (dz * rows + dy) * columns + dx]
-                    if label == 0:
+                    j = i + (dz * rows + dy) * columns + dx
+                    if labels[j] == 0:
                         continue
-                    other = _root(parent, label)
+                    other = _root(parent, labels[j])
+                    slope = (distance[j] - distance[i]) / np.float32(math.sqrt(dz * dz + dy * dy + dx * dx))
+                    if not slope <= steepest:  # also where both are infinite
+                        steepest, uphill = slope, other
                     if own == 0 or other == own:
                         own = other
                         continue
@@ -130,8 +135,10 @@ def _flood(order, distance, shape, keep):  # type: ignore[no-untyped-def]
                         parent[small] = big
                         own = big
                     elif centre[other] > centre[own]:
-                        own = other  # a neck goes to the larger body
-        if own == 0:
+                        own = other
+        if own != 0:
+            own = _root(parent, uphill)  # on a neck, where the way uphill is steepest
+        else:
             if n == parent.size:
                 parent = np.concatenate((parent, np.empty_like(parent)))
                 centre = np.concatenate((centre, np.empty_like(centre)))

@@ -5,14 +5,15 @@ It needs no whole chords and is therefore unbiased where the frame or the outlin
 4 φ / S_V (Tomkeieff 1945). It is averaged over the directions of ``surface.directions``.
 
 The *distribution* comes from runs of pixels along rows, columns and (in the plane) both diagonals. A run that ends at the frame or
-the outline is cut: its true length is longer. Cut runs enter as right-censored lengths by the product-limit estimate (Kaplan and
-Meier 1958; for cut segments Laslett 1982), so that the distribution is neither shortened by counting them as whole nor by leaving
-the long ones out.
+the outline is cut: its true length is longer. Counting cut runs as whole shortens the distribution, leaving them out does so too, and
+taking each as a chord of its own counts a chord that two windows share twice. So a chord belongs to where it starts: runs whose start
+is seen enter, the end cut or not (right-censored), by the product-limit estimate (Kaplan and Meier 1958); and because a line has no
+preferred sense, once from each end. A whole run then counts twice, a run cut at one end once, a run cut at both ends not at all.
 
 References
 ----------
-Cauchy 1850; Tomkeieff, Nature 155 (1945) 24; Serra (1982), chapter X; Kaplan and Meier, J. Am. Stat. Assoc. 53 (1958) 457; Laslett,
-Biometrika 69 (1982) 357.
+Cauchy 1850; Tomkeieff, Nature 155 (1945) 24; Serra (1982), chapter X; Kaplan and Meier, J. Am. Stat. Assoc. 53 (1958) 457;
+Laslett, Biometrika 69 (1982) 357 (cut segments).
 """
 
 from __future__ import annotations
@@ -51,10 +52,11 @@ def mean_chord(counts: Crossings, *, pixel_size: float, walls: bool = False) -> 
 
 
 def mean_chord_by_direction(counts: Crossings, *, pixel_size: float, walls: bool = False) -> Float:
-    """Mean chord in each direction of ``counts.steps``; NaN where no boundary is crossed."""
-    ends, pairs, crossings = counts.ends.sum(axis=1), counts.pairs.sum(axis=1), counts.crossings.sum(axis=1)
-    length = (2.0 * pairs - ends if walls else ends) / 2.0 * counts.lengths
-    return np.divide(2.0 * length, crossings, out=np.full(ends.size, np.nan), where=crossings > 0) * pixel_size
+    """Mean chord in each direction of ``surface.directions``; NaN where no boundary is crossed."""
+    used = counts.weights > 0
+    ends, pairs, crossings = counts.ends.sum(axis=1)[used], counts.pairs.sum(axis=1)[used], counts.per_length[used]
+    share = np.divide(2.0 * pairs - ends if walls else ends, 2.0 * pairs, out=np.zeros(ends.size), where=pairs > 0)
+    return np.divide(2.0 * share, crossings, out=np.full(ends.size, np.nan), where=crossings > 0) * pixel_size
 
 
 def chord_counts(phase: BoolArray, inside: BoolArray) -> Int64:
@@ -67,8 +69,8 @@ def chord_counts(phase: BoolArray, inside: BoolArray) -> Int64:
 
     Returns
     -------
-    int64 array (directions, 2, 2, n + 1): direction (columns, rows, then both diagonals; in 3-D columns, rows, planes); phase (1)
-    or rest (0); whole (0) or cut by the frame or the edge of ``inside`` (1); length in steps.
+    int64 array (directions, 2, 3, n + 1): direction (columns, rows, then both diagonals; in 3-D columns, rows, planes); phase (1)
+    or rest (0); number of ends cut by the frame or the edge of ``inside`` (0, 1, 2); length in steps.
 
     Raises
     ------
@@ -111,7 +113,7 @@ def product_limit(lengths: Float, whole: Float, cut: Float) -> Float:
 @numba.njit(cache=True)
 def _runs(state, steps, n):  # type: ignore[no-untyped-def]
     planes, rows, columns = state.shape
-    out = np.zeros((steps.shape[0], 2, 2, n + 1), dtype=np.int64)
+    out = np.zeros((steps.shape[0], 2, 3, n + 1), dtype=np.int64)
     # The run that ends at each pixel so far: twice its length, plus one where its start is cut.
     run = np.zeros(state.shape, dtype=np.int32)
     for k in range(steps.shape[0]):
@@ -125,7 +127,7 @@ def _runs(state, steps, n):  # type: ignore[no-untyped-def]
                         before = state[z - dz, y - dy, x - dx]
                         length = run[z - dz, y - dy, x - dx]
                     if before >= 2 and before != s:
-                        cut = 1 if s < 2 or length & 1 else 0
+                        cut = (length & 1) + (1 if s < 2 else 0)
                         out[k, before & 1, cut, length >> 1] += 1
                     if s < 2:
                         run[z, y, x] = 0
@@ -133,7 +135,7 @@ def _runs(state, steps, n):  # type: ignore[no-untyped-def]
                     length = length + 2 if before == s else (2 if before >= 2 else 3)
                     run[z, y, x] = length
                     if z + dz >= planes or y + dy >= rows or not 0 <= x + dx < columns:
-                        out[k, s & 1, 1, length >> 1] += 1
+                        out[k, s & 1, 1 + (length & 1), length >> 1] += 1
     return out
 
 
@@ -153,8 +155,8 @@ def part(section: Section, settings: MeasureSettings, *, shared: Shared, rng: np
         estimates[f"chord_{name}_d50"] = Estimate(_median(lengths, chance * lengths))
         curves.append(_curve(f"chord_{name}s", lengths, chance))
     by_direction = mean_chord_by_direction(counts, pixel_size=1.0)
-    worst = np.nanmin(by_direction)
-    estimates["chord_anisotropy"] = Estimate(float(np.nanmax(by_direction) / worst) if worst > 0 else math.nan)
+    known = by_direction[np.isfinite(by_direction) & (by_direction > 0)]
+    estimates["chord_anisotropy"] = Estimate(float(known.max() / known.min()) if known.size else math.nan)
     return Part(estimates, tuple(reversed(curves)))
 
 
@@ -169,7 +171,8 @@ def _means(counts: Crossings, shared: Shared, name: str) -> dict[str, Estimate]:
         k = int(np.flatnonzero((counts.steps == step).all(axis=1))[0])
         length = counts.ends[k, 1:] / 2.0
         length = counts.pairs[k, 1:] - length if walls else length
-        result = block_ratio(2.0 * length, counts.crossings[k, 1:], inflation=inflation, scale="log")
+        gain = 1.0 + counts.loss
+        result = block_ratio(2.0 * length, gain * counts.crossings[k, 1:], inflation=inflation, scale="log")
         estimates[f"chord_{name}_mean_{axis}"] = estimate_of(result, scale="log")
     return estimates
 
@@ -179,8 +182,8 @@ def _distribution(runs: Int64, ndim: int) -> tuple[Float, Float]:
     step = np.sqrt(np.square(run_steps(ndim)).sum(axis=1))
     lengths = np.multiply.outer(step, np.arange(runs.shape[2]))
     # The lines of a step of length l lie 1/l apart, so a chord met along them stands for 1/l of test-line spacing.
-    whole, cut = (runs[:, i] / step[:, None] for i in (0, 1))
-    used = (runs.sum(axis=1) > 0) & (lengths > 0)
+    whole, cut = 2.0 * runs[:, 0] / step[:, None], runs[:, 1] / step[:, None]
+    used = (whole + cut > 0) & (lengths > 0)
     values, index = np.unique(np.round(lengths[used], 9), return_inverse=True)
     whole, cut = (np.bincount(index, table[used], values.size).astype(np.float64, copy=False) for table in (whole, cut))
     return values, product_limit(values, whole, cut)
