@@ -8,6 +8,7 @@ from typing import Literal
 import numpy as np
 
 from poroscan.demix.binary import ABSENT, EDGES, edge_gaps
+from poroscan.demix.binodal import separation
 from poroscan.demix.equilibrium import potential_gap, solve_phases, through_feed
 from poroscan.demix.interaction import FloatArray
 from poroscan.demix.mixture import excess, fractions, ideal_energy, scaled_curvature, site_potentials
@@ -20,6 +21,9 @@ from poroscan.errors import SimulationError
 _MISSED = 1e-8
 _ON_EDGE = 1e-12
 _ROUNDING = 1e-9
+_SLACK = 0.02  # of a tie line: how far the interpolated binodal may be off
+_CLOSE = 1e-3
+_TRIVIAL = 1e-5  # separation below which two phases are one
 
 
 @dataclass(frozen=True)
@@ -92,13 +96,25 @@ def _coexisting(diagram: PhaseDiagram, feed: FloatArray) -> FloatArray | None:
         if (triangle.amounts(feed) >= 0).all():
             return triangle.logs
     for region in diagram.regions:
-        position = region.locate(feed[:, None])[0][0]
+        position, lever = (float(found[0]) for found in region.locate(feed[:, None], slack=_SLACK))
         if np.isfinite(position):
-            solved = solve_phases(diagram.mixture, _guess(region, float(position)), through_feed(feed[0], feed[2]))
-            if solved is None:
+            solved = solve_phases(diagram.mixture, _guess(region, position), through_feed(feed[0], feed[2]))
+            if solved is None or separation(solved) < _TRIVIAL:
+                if not 0 <= lever <= 1:
+                    continue
                 raise SimulationError(f"the tie line through the feed {feed.round(6).tolist()} could not be solved for")
-            return solved
+            if _lies_between(feed, solved):
+                return solved
     return None
+
+
+def _lies_between(feed: FloatArray, logs: FloatArray) -> bool:
+    """True where the feed lies between the phases of the tie line through it, and not beyond one of them."""
+    first, last = np.exp(logs).T
+    share = float((feed - last) @ (first - last)) / float((first - last) @ (first - last))
+    if float((feed - last) @ (feed - last)) < _CLOSE**2:  # the trace decides: it differs by more than rounding
+        share = float((feed[2] - last[2]) / (first[2] - last[2]))
+    return 0 <= share <= 1
 
 
 def _guess(region: Region, position: float) -> FloatArray:

@@ -10,6 +10,8 @@ from poroscan.demix.interaction import FloatArray
 from poroscan.demix.mixture import Mixture, scaled_curvature
 
 _CHUNK = 4096
+_NEWTON_STEPS = 4
+_LOG_TRACE = -4.6  # of 0.01
 _ALONG = np.linspace(0, 1, 129)
 
 
@@ -79,13 +81,15 @@ class Region:
         # traces run straight in the logarithm, except next to an edge, where one end is −inf
         return np.where((phi < 1e-3) & np.isfinite(curved), curved, np.maximum(straight, -1e4))
 
-    def locate(self, phi: FloatArray) -> tuple[FloatArray, FloatArray]:
-        """Tie line through each point.
+    def locate(self, phi: FloatArray, *, slack: float = 0.0) -> tuple[FloatArray, FloatArray]:
+        """Tie line through each point, interpolated between those of the family.
 
         Parameters
         ----------
         phi
             Fractions, shape (3, points).
+        slack
+            How far beyond the ends of a tie line (in shares of it) a point may lie.
 
         Returns
         -------
@@ -96,27 +100,57 @@ class Region:
         lever = np.full(phi.shape[1], np.nan)
         for start in range(0, phi.shape[1], _CHUNK):
             stop = start + _CHUNK
-            position[start:stop], lever[start:stop] = self._locate_chunk(phi[:, start:stop])
+            position[start:stop], lever[start:stop] = self._locate_chunk(phi[:, start:stop], slack)
         return position, lever
 
-    def _locate_chunk(self, phi: FloatArray) -> tuple[FloatArray, FloatArray]:
+    def _locate_chunk(self, phi: FloatArray, slack: float) -> tuple[FloatArray, FloatArray]:
         rich, lean = self.rich[:, [0, 2]], self.lean[:, [0, 2]]
         along = rich - lean
-        n, p = phi[0][:, None], phi[2][:, None]
-        across = along[:, 0] * (p - lean[:, 1]) - along[:, 1] * (n - lean[:, 0])
-        crossed = (across[:, :-1] < 0) != (across[:, 1:] < 0)
-        point, index = np.nonzero(crossed)
+        points = phi[[0, 2]].T
+        # which side of each tie line a point lies on: between two neighbours that disagree runs the one through it
+        across = along[:, 0] * (points[:, 1:] - lean[:, 1]) - along[:, 1] * (points[:, :1] - lean[:, 0])
+        point, index = np.nonzero((across[:, :-1] < 0) != (across[:, 1:] < 0))
         before, after = across[point, index], across[point, index + 1]
-        weight = before / (before - after)
+        weight = _collinear(points[point], (lean, along), index, before / (before - after))
         foot = lean[index] + weight[:, None] * (lean[index + 1] - lean[index])
         reach = along[index] + weight[:, None] * (along[index + 1] - along[index])
-        offset = np.column_stack([phi[0][point], phi[2][point]]) - foot
-        lever = (offset * reach).sum(axis=1) / (reach**2).sum(axis=1)
-        inside = (lever >= 0) & (lever <= 1)
+        lever = ((points[point] - foot) * reach).sum(axis=1) / (reach**2).sum(axis=1)
+        lever = self._mended_for_traces(lever, points[point, 1], index, weight)
+        inside = (lever >= -slack) & (lever <= 1 + slack)
         position_of, lever_of = np.full(phi.shape[1], np.nan), np.full(phi.shape[1], np.nan)
         position_of[point[inside]] = index[inside] + weight[inside]
         lever_of[point[inside]] = lever[inside]
         return position_of, lever_of
+
+    def _mended_for_traces(
+        self, lever: FloatArray, polymer: FloatArray, index: np.ndarray, weight: FloatArray
+    ) -> FloatArray:
+        """Where the lean phase holds a trace of polymer, its fraction runs straight in the logarithm, not along the chord."""
+        low, high = self.logs[index, 2, 1], self.logs[index + 1, 2, 1]
+        usable = (np.maximum(low, high) < _LOG_TRACE) & np.isfinite(low) & np.isfinite(high)
+        low, high = np.where(usable, low, 0.0), np.where(usable, high, 0.0)
+        lean = np.exp((1 - weight) * low + weight * high)
+        rich = self.rich[:, 2]
+        top = rich[index] + weight * (rich[index + 1] - rich[index])
+        usable &= top > 0.01
+        return np.where(usable, (polymer - lean) / np.where(usable, top - lean, 1.0), lever)
+
+
+def _collinear(
+    points: FloatArray, family: tuple[FloatArray, FloatArray], index: np.ndarray, weight: FloatArray
+) -> FloatArray:
+    """Weight between tie line ``index`` and the next at which the interpolated one runs exactly through the point."""
+    lean, along = family
+    step_lean, step_along = lean[index + 1] - lean[index], along[index + 1] - along[index]
+    for _ in range(_NEWTON_STEPS):
+        offset = points - lean[index] - weight[:, None] * step_lean
+        reach = along[index] + weight[:, None] * step_along
+        value = reach[:, 0] * offset[:, 1] - reach[:, 1] * offset[:, 0]
+        slope = step_along[:, 0] * offset[:, 1] - step_along[:, 1] * offset[:, 0]
+        slope = slope - reach[:, 0] * step_lean[:, 1] + reach[:, 1] * step_lean[:, 0]
+        move = value / np.where(slope == 0, np.inf, slope)
+        weight = np.clip(weight - move, 0.0, 1.0)
+    return weight
 
 
 def make_region(mixture: Mixture, logs: list[FloatArray], ends: tuple[str, str]) -> Region:

@@ -5,6 +5,7 @@ import pytest
 from scipy.optimize import linprog
 from ternary_tables import CASES
 
+from poroscan.demix.classify import METASTABLE_LEAN, STABLE, classify
 from poroscan.demix.flash import flash
 from poroscan.demix.interaction import SharePolynomial
 from poroscan.demix.mixture import Mixture
@@ -91,6 +92,31 @@ def test_feeds_on_an_edge_use_its_binary_gap() -> None:
     np.testing.assert_allclose(result.amounts @ result.phases, [0.5, 0, 0.5], atol=1e-12)
     assert result.residual < 1e-10
     assert len(flash(diagram, 0.0, 0.5).amounts) == 1
+
+
+@pytest.mark.parametrize("case", ["T6", "T8", "P1"])
+def test_feeds_with_a_trace_of_one_component(case: str, rng: np.random.Generator) -> None:
+    # the lean phase holds 1e-7 to 1e-190 of polymer: a feed with 1e-9 may be one phase or two, and must be told apart
+    diagram = find_phase_diagram(CASES[case].mixture)
+    for trace in (1e-11, 1e-9, 1e-7, 1e-5):
+        for share in rng.uniform(0.02, 0.98, 4):
+            rest = (1 - trace) * share
+            for n, p in ((rest, 1 - trace - rest), (rest, trace), (trace, rest)):
+                result = flash(diagram, n, p)  # refuses a one-phase answer that another composition undercuts
+                np.testing.assert_allclose(result.amounts @ result.phases, [n, 1 - n - p, p], rtol=1e-6, atol=1e-13)
+                assert result.amounts.min() >= 0
+
+
+@pytest.mark.parametrize("factor", [0.5, 2.0])
+def test_either_side_of_the_lean_branch(factor: float) -> None:
+    # T3 at solvent 0.2: lean polymer 4.085606e-4; half of it dissolves, twice as much does not
+    diagram = find_phase_diagram(MIXTURES["T3"])
+    line = diagram.tie_line_at("s", 0.2)
+    polymer = factor * line.lean[2]
+    feed = line.lean + (polymer - line.lean[2]) / (line.rich[2] - line.lean[2]) * (line.rich - line.lean)
+    assert len(flash(diagram, feed[0], feed[2]).amounts) == (2 if factor > 1 else 1)
+    found = classify(diagram, phi_n=feed[0], phi_p=feed[2])
+    assert int(found.state) == (METASTABLE_LEAN if factor > 1 else STABLE)
 
 
 @pytest.mark.parametrize(("n", "p"), [(0, 0), (1, 0), (0, 1)])
