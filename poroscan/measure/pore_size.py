@@ -118,7 +118,8 @@ def _sizes(
     band = _band(section, settings)
     for suffix, (_, weight) in zip(("_number", ""), _weights(table), strict=True):
         for name, q in (("d10", 0.1), ("d50", 0.5), ("d90", 0.9)):
-            result = block_quantile(d, weight, block, q=q, inflation=shared.block_inflation)
+            # A body counts whole in one block: no inflation for what straddles block borders.
+            result = block_quantile(d, weight, block, q=q)
             sd = threshold_sd(*(quantiles[name] for quantiles in band)) if band and not suffix else None
             estimates[f"pore_{name}{suffix}"] = estimate_of(result, threshold=sd, scale="log")
         low, middle, high = (estimates[f"pore_{name}{suffix}"].value for name in ("d10", "d50", "d90"))

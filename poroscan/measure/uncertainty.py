@@ -162,7 +162,10 @@ def block_quantile(
     """Weighted quantile with Woodruff's interval from blocks.
 
     The share of weight at or below the quantile is a ratio whose interval follows from ``block_ratio``; the quantiles at the two
-    ends of that interval bound the quantile itself. No density is estimated.
+    ends of that interval bound the quantile itself. No density is estimated. Where few features carry the smaller tail (the
+    handful of largest pores above D90), Student's factor goes by their effective number rather than that of the blocks.
+
+    A feature counts whole in one block, so no pair of points straddles a border: features need no ``inflation``, pixels do.
 
     Parameters
     ----------
@@ -201,9 +204,12 @@ def block_quantile(
     if not math.isfinite(ratio.low):
         return BlockEstimate(value, math.nan, math.nan, math.nan, ratio.n_blocks, ratio.df)
     # The interval of the share is centred on the share actually reached, so that ties do not shift it away from q.
-    low, high = (float(_weighted_quantile(x, w, p)) for p in (ratio.low, ratio.high))
-    sd = (high - low) / (2 * t_quantile(ratio.df, level=level))
-    return BlockEstimate(value, sd, min(low, value), max(high, value), ratio.n_blocks, ratio.df)
+    df = min(ratio.df, max(_tail_features(x, w, value) - 1, 1.0))
+    factor = t_quantile(df, level=level)
+    ends = symmetric_on(ratio.value, factor * ratio.sd, scale="logit")
+    low, high = (float(_weighted_quantile(x, w, p)) for p in ends)
+    sd = (high - low) / (2 * factor)
+    return BlockEstimate(value, sd, min(low, value), max(high, value), ratio.n_blocks, df)
 
 
 def symmetric_on(value: float, half_width: float, *, scale: Scale) -> tuple[float, float]:
@@ -316,6 +322,12 @@ def _weighted_quantile(
 ) -> npt.NDArray[np.float64]:
     """Quantile of sorted values: midpoint rule, each value at the middle of its own weight, linear between."""
     return np.asarray(np.interp(q, (np.cumsum(w) - w / 2) / w.sum(), x))
+
+
+def _tail_features(x: npt.NDArray[np.float64], w: npt.NDArray[np.float64], value: float) -> float:
+    """Kish's effective number of features beyond a value, on the side where there are fewer."""
+    sides = (w[x >= value], w[x <= value])
+    return min(float(v.sum() ** 2 / np.square(v).sum()) if v.sum() > 0 else 1.0 for v in sides)
 
 
 def _share_below(x: npt.NDArray[np.float64], w: npt.NDArray[np.float64], value: float) -> npt.NDArray[np.float64]:
