@@ -107,11 +107,17 @@ def _fine_mask(
     band = 3 * step if best.name in BY_GREY else (texture_window(best.raw.shape) // 2 + 1) * step
     grown = distance_to(body) <= (3 * step if best.name in BY_GREY else step)
     deep = distance_to(~body) > band
-    filled = fill_holes((raw & grown & ~others) | deep)
-    filled = _largest(ndimage.binary_opening(filled, np.ones((3, 3))) | deep)
-    closed, used = close_body(filled, radius=radius)
+    own = (raw & grown & ~others) | deep
+    filled = _largest(ndimage.binary_opening(fill_holes(own), np.ones((3, 3))) | deep)
+    pore = _largest_area(filled & ~raw) if best.name in BY_GREY else 0.0
+    closed, used = close_body(filled, radius=radius, pore=pore)
     closed = closed & ~others
     return closed, float((closed & ~filled).sum()) / max(float(closed.sum()), 1.0), used
+
+
+def _largest_area(mask: BoolArray) -> float:
+    labels, count = ndimage.label(mask)
+    return float(np.bincount(labels.ravel())[1:].max()) if count else 0.0
 
 
 def _largest(mask: BoolArray) -> BoolArray:
