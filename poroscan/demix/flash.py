@@ -22,7 +22,6 @@ _MISSED = 1e-8
 _ON_EDGE = 1e-12
 _ROUNDING = 1e-9
 _SLACK = 0.02  # of a tie line: how far the interpolated binodal may be off
-_CLOSE = 1e-3
 _TRIVIAL = 1e-5  # separation below which two phases are one
 
 
@@ -111,10 +110,10 @@ def _coexisting(diagram: PhaseDiagram, feed: FloatArray) -> FloatArray | None:
 def _lies_between(feed: FloatArray, logs: FloatArray) -> bool:
     """True where the feed lies between the phases of the tie line through it, and not beyond one of them."""
     first, last = np.exp(logs).T
-    share = float((feed - last) @ (first - last)) / float((first - last) @ (first - last))
-    if float((feed - last) @ (feed - last)) < _CLOSE**2:  # the trace decides: it differs by more than rounding
-        share = float((feed[2] - last[2]) / (first[2] - last[2]))
-    return 0 <= share <= 1
+    j = int(
+        np.abs(logs[:, 0] - logs[:, 1]).argmax()
+    )  # a trace in one phase tells best: it differs by more than rounding
+    return 0 <= float((feed[j] - last[j]) / (first[j] - last[j])) <= 1
 
 
 def _guess(region: Region, position: float) -> FloatArray:
