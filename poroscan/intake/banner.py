@@ -21,7 +21,7 @@ _MIN_ROWS = 10
 _TOLERANCE = (1.5 / 255, 14.0 / 255)
 _MIN_LETTERS = 4
 _FLAT = 0.45  # share of flat pixels in a row of dense text
-_QUIET = 0.75  # share of flat pixels in the first rows of a banner
+_QUIET = 0.65  # share of flat pixels in the first rows of a banner
 _EQUAL = 0.45  # share of neighbours in a row that are equal; noise leaves far fewer
 _MAX_GAP = 6  # rows with few flat pixels that may interrupt a banner (rules, thick lines, JPEG rings)
 
@@ -40,12 +40,15 @@ class Strip:
         Share of flat pixels in every row of the picture.
     ground
         Share of pixels of the background's level in every row.
+    calm
+        Share of neighbours in every row that are equal to one and a half grey steps of 255.
     """
 
     levels: tuple[float, ...]
     tolerance: float
     flat: npt.NDArray[np.float64]
     ground: npt.NDArray[np.float64]
+    calm: npt.NDArray[np.float64]
 
 
 def stretched(grey: npt.NDArray) -> npt.NDArray[np.float32]:
@@ -88,9 +91,10 @@ def _strip(bottom: npt.NDArray[np.float32]) -> Strip:
         levels.append(_level(rest)[0])
     near = np.abs(bottom - background) <= tolerance
     ground = near.mean(axis=1)
+    calm = (np.abs(np.diff(bottom, axis=1)) < 1.5 / 255).mean(axis=1)
     for level in levels[1:]:
         near |= np.abs(bottom - level) <= tolerance
-    return Strip(tuple(levels), tolerance, near.mean(axis=1), ground)
+    return Strip(tuple(levels), tolerance, near.mean(axis=1), ground, calm)
 
 
 def _level(values: npt.NDArray[np.float32]) -> tuple[float, float]:
@@ -114,7 +118,7 @@ def _flat_from(flat: npt.NDArray[np.float64]) -> int:
             start, gap = row, 0
         else:
             gap += 1
-            if gap > _MAX_GAP:
+            if gap > max(_MAX_GAP, min(40, 0.6 * (len(flat) - start))):  # bold letters fill several rows
                 break
     return start
 
@@ -124,7 +128,7 @@ def _edges(bottom: npt.NDArray[np.float32], strip: Strip, start: int) -> list[in
     last = len(strip.flat) - _MIN_ROWS
     edges = []
     for row in range(max(1, start - _MAX_GAP - 3), last + 1):
-        if _jumps(strip.flat, row) or _jumps(strip.ground, row) or _is_line(bottom, strip, row):
+        if any(_jumps(share, row) for share in (strip.flat, strip.ground, strip.calm)) or _is_line(bottom, strip, row):
             edges.append(row)
     return edges
 

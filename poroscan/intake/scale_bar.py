@@ -388,7 +388,7 @@ def label_boxes(grey: npt.NDArray[np.float32], bar: ScaleBar, *, banner_rows: in
     left, right = max(0, bar.box.left - reach - 40), min(columns, bar.box.right + 3 * reach)
     window = values[top:bottom, left:right]
     lines = _lines(window, bar, Box(top, bottom, left, right))
-    moved = [line.moved(top, left) for line in lines]
+    moved = [line.moved(top, left) for line in lines if left == 0 or line.left > 1.3 * line.height]  # else perhaps cut
     return sorted(moved, key=lambda line: (_group_distance(line, moved, bar), -line.width))
 
 

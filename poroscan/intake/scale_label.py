@@ -20,6 +20,8 @@ _UNITS: tuple[tuple[re.Pattern[str], float], ...] = (
     (re.compile(r"[µμ]$"), 1.0),
 )  # fmt: skip
 
+_ROUND = frozenset("10 12 15 20 25 30 40 50 60 70 75 80 90".split())  # noqa: SIM905 - reads better than a list of texts
+
 _DIGITS = str.maketrans("OoQIl|", "000111")
 
 
@@ -60,6 +62,9 @@ def _value(number: str) -> float | None:
 
 
 def plausible(um: float) -> bool:
-    """True for the lengths that scale bars are drawn with: at most two significant digits."""
-    digits = f"{um:.6e}".split("e")[0].replace(".", "").rstrip("0")
-    return len(digits) <= 2
+    """True for the lengths that scale bars are drawn with: two leading digits of the usual round numbers.
+
+    Other lengths in a banner (a working distance of 0.92 mm) are not taken for the bar's.
+    """
+    digits = f"{um:.6e}".split("e")[0].replace(".", "")
+    return digits[:2] in _ROUND and not digits[2:].strip("0")
