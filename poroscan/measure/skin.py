@@ -155,7 +155,7 @@ def _bootstrap(
     weights = rng.multinomial(n, np.full(n, 1 / n), size=settings.bootstrap_replicates).astype(np.float64)
     drawn = thickness(weights @ pores[used], weights @ pixels[used], profile.middle, level=level)
     drawn = np.where(np.isnan(drawn), profile.edges[-1], drawn)
-    low, high = np.quantile(drawn, (0.025, 0.975))
+    low, high = (float(q) for q in np.quantile(drawn, (0.025, 0.975)))
     widen = math.sqrt(inflation)
     low, high = value + widen * (min(low, value) - value), value + widen * (max(high, value) - value)
     return Estimate(value, max(low, 0.0), high, MappingProxyType({"sampling": float(np.std(drawn)) * widen}))

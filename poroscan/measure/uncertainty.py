@@ -146,8 +146,8 @@ def block_linear(
     if df < LEAST_BLOCKS - 1 or not math.isfinite(value):
         return BlockEstimate(value, math.nan, math.nan, math.nan, n, df)
     sd = math.sqrt(inflation * float(np.sum(influence**2 / (1 - weights / total))))
-    low, high = symmetric_on(value, t_quantile(df, level=level) * sd, scale=scale)
-    return BlockEstimate(value, sd, low, high, n, df)
+    low, high = symmetric_on(float(value), t_quantile(df, level=level) * sd, scale=scale)
+    return BlockEstimate(float(value), sd, low, high, n, df)
 
 
 def block_quantile(
@@ -204,7 +204,7 @@ def block_quantile(
     if not math.isfinite(ratio.low):
         return BlockEstimate(value, math.nan, math.nan, math.nan, ratio.n_blocks, ratio.df)
     # The interval of the share is centred on the share actually reached, so that ties do not shift it away from q.
-    df = min(ratio.df, max(_tail_features(x, w, value) - 1, 1.0))
+    df = min(ratio.df, max(_tail_features(x, w, value) - 1, 2.0))
     factor = t_quantile(df, level=level)
     ends = symmetric_on(ratio.value, factor * ratio.sd, scale="logit")
     low, high = (float(_weighted_quantile(x, w, p)) for p in ends)

@@ -5,6 +5,9 @@ from itertools import product
 
 import numpy as np
 import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
+from hypothesis.extra.numpy import array_shapes, arrays
 from media import boolean_discs, disc, level_cut, s2_boolean_void, s2_level_cut
 from numpy.testing import assert_allclose, assert_array_equal
 
@@ -106,6 +109,27 @@ def test_correlation_length_interval_covers_the_closed_form(rng):
         inside += estimate.low <= truth <= estimate.high
         assert estimate.value == pytest.approx(truth, rel=0.1)
     assert inside >= 17
+
+
+@settings(max_examples=60, deadline=None)
+@given(
+    arrays(np.uint8, array_shapes(min_dims=2, max_dims=3, min_side=1, max_side=9), elements=st.integers(0, 2)),
+    st.integers(0, 12),
+)
+def test_any_masks_are_counted_exactly(state, reach):
+    particle = state > 0
+    if not particle.any():
+        return
+    pores = state > 1
+    counts = two_point(pores, particle, max_lag=reach)
+    assert counts.pairs[counts.zero] == np.count_nonzero(particle)
+    assert counts.hits[counts.zero] == np.count_nonzero(pores)
+    assert np.all((counts.hits >= 0) & (counts.hits <= counts.pairs))
+    if min(counts.reach) >= max(particle.shape) - 1:
+        assert int((counts.multiplicity() * counts.pairs).sum()) == np.count_nonzero(particle) ** 2
+    radial = radial_average(counts)
+    assert radial.s2[0] == counts.porosity
+    assert radial.pairs.sum() <= np.count_nonzero(particle) ** 2
 
 
 @pytest.mark.parametrize(
