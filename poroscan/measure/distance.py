@@ -29,7 +29,8 @@ def distance_inside(mask: BoolArray) -> Float32:
     """
     if mask.all():
         return np.full(mask.shape, np.inf, dtype=np.float32)
-    distance: Float32 = edt.edt(np.ascontiguousarray(mask), black_border=False, parallel=1)
+    # The transform asks for a writable buffer, though it writes nothing.
+    distance: Float32 = edt.edt(np.require(mask, requirements=("C", "W")), black_border=False, parallel=1)
     return distance
 
 

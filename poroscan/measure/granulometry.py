@@ -68,8 +68,7 @@ def opening_entropy(table: ThicknessTable) -> float:
     """Entropy of the pattern spectrum in classes of one pixel over its largest possible value; NaN for an empty phase."""
     if table.totals.sum() == 0:
         return math.nan
-    edges = np.arange(math.floor(float(table.diameters[-1])) + 2) + 0.5
-    share = pattern_spectrum(table, np.concatenate([[0.0], edges]))
+    share = pattern_spectrum(table, np.arange(math.floor(float(table.diameters[-1]) + 0.5) + 1) + 0.5)
     if share.size < 2:
         return 0.0
     positive = share[share > 0]

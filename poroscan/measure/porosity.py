@@ -104,7 +104,7 @@ def _from_grey(section: Section, shared: Shared) -> Estimate:
     if min(pores.size, walls.size) < 50:
         return Estimate(math.nan)
     pore, wall = float(np.median(pores)), float(np.median(walls))
-    if abs(pore - wall) < _LEAST_CONTRAST * (float(pores.std()) + float(walls.std())):
+    if not abs(pore - wall) > _LEAST_CONTRAST * (float(pores.std()) + float(walls.std())):
         return Estimate(math.nan)
     share = (section.grey - np.float32(wall)) / np.float32(pore - wall)
     totals = np.bincount(shared.blocks.ravel(), share.ravel(), shared.n_blocks)[1:]

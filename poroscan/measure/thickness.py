@@ -114,7 +114,7 @@ def squared_thickness(phase: BoolArray) -> Int32:
         return np.zeros(phase.shape, dtype=np.int32)
     if phase.all():
         return np.full(phase.shape, -1, dtype=np.int32)
-    volume = np.ascontiguousarray(phase).reshape((1, *phase.shape) if phase.ndim == 2 else phase.shape)
+    volume = np.require(phase, requirements=("C", "W")).reshape((1, *phase.shape) if phase.ndim == 2 else phase.shape)
     squared = edt.edtsq(volume[0] if phase.ndim == 2 else volume, black_border=False, parallel=1)
     largest = int(squared.max())
     # float32 holds every squared distance exactly up to radii of 4096 pixels.
