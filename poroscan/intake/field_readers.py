@@ -92,10 +92,14 @@ def _tiff(path: Path, max_voxels: int) -> Loaded:
     import tifffile
 
     from poroscan.intake.headers import ome_spacing
+    from poroscan.intake.tiffs import refuse_truncated
 
     with tifffile.TiffFile(path) as file:
         series = file.series[0]
         _check_size(series.shape, max_voxels)
+        for page in series.pages:
+            if isinstance(page, tifffile.TiffPage | tifffile.TiffFrame):
+                refuse_truncated(page, path)
         spacing = ome_spacing(file.ome_metadata) if file.is_ome and file.ome_metadata else None
         return Loaded({"": series.asarray()}, spacing)
 

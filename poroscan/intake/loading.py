@@ -103,13 +103,14 @@ def inspect_picture(
         raise bad_input(path, *str(error).split("; ", 1)) from None
     kept = np.ascontiguousarray(grey.values[: grey.values.shape[0] - rows])
     quality = image_quality(kept)
+    place = _place(bar, kept.shape[0])
     unread = bar.flags if not chosen.size.known else ()
     picture = Picture(
         kept,
         chosen.size,
         name=shown(path.name),
         banner_rows=rows,
-        notes=(*stored.notes, *grey.notes, *_stated_size(stored), *bar.notes, *chosen.notes),
+        notes=(*stored.notes, *grey.notes, *_stated_size(stored), *bar.notes, *chosen.notes, *place),
         flags=tuple(dict.fromkeys((*grey.flags, *chosen.flags, *unread, *judge(quality)))),
         header=MappingProxyType(_header(stored, sidecar)),
     )
@@ -150,6 +151,14 @@ def _candidates(
     for candidate in (*found, resolution_candidate(stored.resolution), bar.candidate):
         if candidate is not None:
             yield candidate
+
+
+def _place(bar: BarReading, rows: int) -> tuple[str, ...]:
+    """A note where the scale bar lies in the picture itself, so that it is measured along with the specimen."""
+    if bar.bar is None or bar.bar.box.top >= rows:
+        return ()
+    box = bar.bar.box
+    return (f"the scale bar lies in the picture (rows {box.top} to {box.bottom}, columns {box.left} to {box.right})",)
 
 
 def _stated_size(stored: Stored) -> tuple[str, ...]:

@@ -58,7 +58,7 @@ def _read(file: Any, path: Path, number: int, max_pixels: int) -> Stored:
         raise bad_input(path, *wrong)
     if page.imagedepth * page.samplesperpixel > 64:
         raise bad_input(path, f"has {page.samplesperpixel} samples per pixel", "export it as grey or colour")
-    _refuse_truncated(page, path)
+    refuse_truncated(page, path)
     try:
         samples = page.asarray()
     except MemoryError:
@@ -95,17 +95,25 @@ def _page(file: Any, path: Path, number: int) -> tuple[Any, int]:
     raise bad_input(path, f"has {pages} pages, so no page {number}", "set another page")
 
 
-def _refuse_truncated(page: Any, path: Path) -> None:
-    """The decoder fills missing strips of some files with zeros; a truncated picture must not be measured as if whole."""
+def refuse_truncated(page: Any, path: Path) -> None:
+    """Refuse a page whose strips or tiles are missing or reach beyond the end of the file.
+
+    The decoder fills such gaps with zeros, and a truncated picture must not be measured as if whole.
+
+    Raises
+    ------
+    InputError
+        If data are missing.
+    """
     size = path.stat().st_size
-    ends = [o + n for o, n in zip(page.dataoffsets, page.databytecounts, strict=False) if n > 0]
+    ends = [o + n if n > 0 else size + 1 for o, n in zip(page.dataoffsets, page.databytecounts, strict=False)]
     if not ends:
         raise bad_input(path, "holds no picture data", "export it again")
     missing = sum(end > size for end in ends)
     if missing:
         raise bad_input(
             path,
-            f"is truncated ({missing} of {len(ends)} strips or tiles are cut off)",
+            f"is truncated ({missing} of {len(ends)} strips or tiles are missing)",
             "copy it again from its source",
         )
 
@@ -120,9 +128,8 @@ def _one_channel(samples: npt.NDArray, page: Any, path: Path) -> tuple[npt.NDArr
         samples = samples.reshape(page.shaped)[0]
         samples = samples[0]
         notes = (f"plane 1 of {page.imagedepth} is measured",)
-    while samples.ndim > 2 and page.planarconfig == 2 and samples.shape[0] == page.samplesperpixel:
+    if samples.ndim > 2 and page.planarconfig == 2 and samples.shape[0] == page.samplesperpixel:
         samples = np.moveaxis(samples, 0, -1)
-        break
     if samples.ndim == 2:
         return _grey_page(samples, page, photometric, notes)
     if samples.ndim != 3:

@@ -156,7 +156,16 @@ def _values(lines: _Lines, count: int, type_: str, binary: bool, *, limit: int |
         raise ValueError(f"values of type {type_!r} are not read")
     if count < 0 or (limit is not None and count > limit) or count > 2 * len(lines.data):
         raise ValueError("it ends within its data")
-    return lines.block(count, code) if binary else lines.numbers(count).astype(code)
+    return lines.block(count, code) if binary else _typed(lines.numbers(count), code)
+
+
+def _typed(numbers: npt.NDArray[np.float64], code: str) -> npt.NDArray:
+    """Numbers written as text in the type that the file states."""
+    with np.errstate(all="ignore"):
+        values = numbers.astype(code)
+    if code[0] in "ui" and not np.array_equal(values, numbers):
+        raise ValueError("it holds numbers that do not fit their own type")
+    return values
 
 
 def _store(
@@ -260,7 +269,7 @@ class _Packed:
             words = (element.text or "").split()
             if len(words) != count:
                 raise ValueError(f"an array has {len(words)} of {count} values")
-            return np.array([float(w) for w in words]).astype(code)
+            return _typed(np.array([float(w) for w in words]), code)
         dtype = np.dtype(self.order + code)
         raw = self._raw(element, form, count * dtype.itemsize)
         if len(raw) != count * dtype.itemsize:
