@@ -42,6 +42,7 @@ COMMANDS: tuple[str, ...] = (
     "scan",
     "inspect",
     "report",
+    "compare",
     "render",
     "phases",
     "score",
