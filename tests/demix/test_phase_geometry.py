@@ -136,3 +136,27 @@ def test_closed_loop_is_found_without_any_gap_on_an_edge() -> None:
     first, last = loop.stable_plaits
     np.testing.assert_allclose(first, last[[1, 0, 2]], atol=1e-8)
     assert loop.binodal_area > loop.spinodal_area > 0.2
+
+
+@pytest.mark.parametrize("case", ["T3", "T6"])
+def test_classification_tells_traces_of_polymer_apart_between_the_tie_lines(case: str) -> None:
+    # the exact lean phase of tie lines half-way between those of the family: 1 % less polymer dissolves, 1 % more does not
+    found = find_phase_diagram(CASES[case].mixture)
+    solvent = found.regions[0].rich[:, 1]
+    for value in 0.5 * (solvent[10:-40:8] + solvent[11:-39:8]):
+        line = found.tie_line_at("s", float(value))
+        if line.lean[2] < 1e-9:
+            continue  # below the rounding of phi_s = 1 − phi_n − phi_p
+        step = (line.rich - line.lean) / (line.rich[2] - line.lean[2])
+        less, more = (line.lean + change * line.lean[2] * step for change in (-0.01, 0.01))
+        assert int(classify(found, phi_n=less[0], phi_p=less[2]).state) == STABLE
+        assert int(classify(found, phi_n=more[0], phi_p=more[2]).state) == METASTABLE_LEAN
+
+
+def test_classification_of_traces_agrees_with_the_flash() -> None:
+    found = find_phase_diagram(CASES["T6"].mixture)
+    n = np.linspace(0.2, 0.99, 40)
+    for polymer in (1e-11, 1e-9, 1e-7):
+        states = classify(found, phi_n=n, phi_p=np.full_like(n, polymer)).state
+        phases = np.array([len(flash(found, a, polymer).amounts) for a in n])
+        assert ((states != STABLE) == (phases > 1)).mean() > 0.97
