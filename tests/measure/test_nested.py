@@ -80,6 +80,16 @@ def test_intervals_cover_where_pooled_particles_do_not(images, between, rng):
         assert naive / runs < 0.85
 
 
+def test_unequal_images_are_weighted_by_their_variance():
+    # Weights n/(σ_w² + n σ_b²) by hand
+    y, g = [1.0, 2, 3, 4, 9, 10, 20], ["a", "a", "a", "a", "b", "b", "c"]
+    between, within = variance_components(y, g)
+    n, means = np.array([4, 2, 1]), np.array([2.5, 9.5, 20])
+    wanted = np.average(means, weights=n / (within + n * between))
+    assert nested_mean(y, g).mean == pytest.approx(wanted)
+    assert abs(wanted - np.mean(y)) > 1
+
+
 def test_further_sampling_reaches_the_half_width(rng):
     group = np.repeat(np.arange(6), 5)
     y = 2 * rng.standard_normal(6)[group] + rng.standard_normal(30)

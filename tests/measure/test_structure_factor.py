@@ -32,6 +32,31 @@ def test_sum_rule_and_low_wave_number_limit(rng):
     assert np.mean(total) == pytest.approx(1, abs=0.025)
 
 
+@pytest.mark.parametrize("shape", [(40, 45), (64, 64)])
+def test_rings_equal_the_whole_plane_of_a_plain_transform(shape, rng):
+    # Second implementation: full complex transform, every wave number of the plane in its ring, no half-space weights
+    pores = rng.random(shape) < 0.3
+    factor = structure_factor(pores, np.ones(shape, bool))
+    phi = pores.mean()
+    power = np.abs(np.fft.fft2(pores - phi)) ** 2 / (pores.size * phi * (1 - phi))
+    q = np.hypot(*np.meshgrid(*[2 * np.pi * np.fft.fftfreq(n) for n in shape], indexing="ij"))
+    edges = [0.5 * 2 * np.pi / math.sqrt(pores.size)]
+    while edges[-1] < np.pi:
+        edges.append(edges[-1] + max(2 * edges[0], 0.06 * edges[-1]))
+    edges = [e for e in edges if e <= np.pi]
+    ring = np.digitize(q, edges)
+    counts = np.bincount(ring.ravel(), minlength=len(edges) + 1)[1:-1]
+    means = np.bincount(ring.ravel(), power.ravel(), len(edges) + 1)[1:-1]
+    assert factor.modes.sum() == pytest.approx(counts.sum() / 2, rel=0.02)
+    # A fine table assigns the rings, so that single modes at their borders may change sides.
+    close = np.abs(factor.modes - counts[counts > 0] / 2) < 0.6
+    assert close.mean() > 0.5
+    np.testing.assert_allclose(factor.s[close], (means / np.maximum(counts, 1))[counts > 0][close], rtol=0.25)
+    same = np.abs(factor.modes - counts[counts > 0] / 2) < 1e-9
+    np.testing.assert_allclose(factor.s[same], (means / np.maximum(counts, 1))[counts > 0][same], rtol=1e-3)
+    assert same.sum() >= 3
+
+
 @pytest.mark.parametrize("spacing", [12.0, 25.0])
 def test_spacing_of_a_ring_spectrum_with_its_interval(spacing, rng):
     inside = 0
