@@ -63,11 +63,10 @@ def _particles_and_batches(run: RunFolder, outcomes: Iterable[ImageOutcome]) -> 
                 rows = _rows(run, outcome)
                 collector.add_image(rows, measured=outcome.outcome == "measured")
                 particles_csv.writerows(map(csv_row, rows))
-                if rows:
-                    particles.add(pa.Table.from_pylist(rows, schema=particle_schema()))
+                particles.add_rows(rows)
             summary = collector.row()
             batches_csv.writerow(csv_row(summary))
-            batches.add(pa.Table.from_pylist([summary], schema=batch_schema()))
+            batches.add_rows([summary])
 
 
 def _open_parquet(stack: contextlib.ExitStack, run: RunFolder, name: str, schema: pa.Schema) -> ParquetStream:

@@ -244,7 +244,8 @@ def _measured_files(task: ImageTask, sha256: str | None) -> dict[str, bytes]:
         for number, section in enumerate(segmentation.sections)
     )
     found = _Measured(picture, segmentation, measurements)
-    return {**_tables(task, found), **_pictures(task, found), "image.json": _json_bytes(_entry(task, found, sha256))}
+    files = {"image.json": _json_bytes(_entry(task, found, sha256))} | _pictures(task, found)
+    return files | _tables(task, found) if measurements else files
 
 
 def _given(task: ImageTask, picture: Picture) -> dict[str, Any]:
@@ -282,6 +283,7 @@ def _tables(task: ImageTask, found: _Measured) -> dict[str, bytes]:
         pores.append(pore_table(measurement.pores, keys=keys, pixel_size=size))
         curves.append(curve_table(measurement.curves, keys=keys, pixel_size=size))
     return {
+        "labels.ome.tif": label_tiff(found.segmentation, found.picture),
         "pores.parquet": parquet_bytes(pa.concat_tables(pores)),
         "curves.parquet": parquet_bytes(pa.concat_tables(curves)),
     }
@@ -292,7 +294,6 @@ def _pictures(task: ImageTask, found: _Measured) -> dict[str, bytes]:
     look = task.recipe.report
     files = {
         "overlay.png": indexed_png(draw(grey, labels, pores, numbers=True)),
-        "labels.ome.tif": label_tiff(found.segmentation, found.picture),
         "small.webp": thumbnail(grey, labels, pores, longest=OVERVIEW_PX, quality=look.picture_quality, numbers=True),
     }
     for number, section in enumerate(found.segmentation.sections, start=1):

@@ -6,6 +6,7 @@ often (Miles 1974; Lantuéjoul 1980). The interval takes particles as nested in 
 
 from __future__ import annotations
 
+import functools
 import math
 from collections import Counter
 from collections.abc import Iterator, Mapping, Sequence
@@ -51,6 +52,7 @@ class BatchMean:
     number: int
 
 
+@functools.cache
 def batch_columns() -> tuple[str, ...]:
     """All columns of batches.csv in order."""
     columns = list(COUNT_COLUMNS)
@@ -60,6 +62,7 @@ def batch_columns() -> tuple[str, ...]:
     return (*columns, *VERDICT_COLUMNS)
 
 
+@functools.cache
 def batch_schema() -> pa.Schema:
     """Arrow schema of batches.parquet; undefined numbers are null."""
     text = {"batch", "regime", "regime_set", "verdict", "flags"}

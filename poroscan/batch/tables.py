@@ -7,6 +7,7 @@ that their size does not count in memory.
 from __future__ import annotations
 
 import csv
+import functools
 import io
 import math
 from collections.abc import Iterable, Mapping, Sequence
@@ -90,6 +91,7 @@ def quantity_columns(q: Quantity) -> tuple[str, ...]:
     return (q.key, *ends, *((q.pixel_key,) if q.pixel_key else ()))
 
 
+@functools.cache
 def particle_columns() -> tuple[str, ...]:
     """All columns of particles.csv in order: those scripts may rely on, then the rest of the catalogue."""
     columns: list[str] = []
@@ -100,6 +102,7 @@ def particle_columns() -> tuple[str, ...]:
     return (*columns, "view")
 
 
+@functools.cache
 def particle_schema() -> pa.Schema:
     """Arrow schema of particles.parquet."""
     return pa.schema([(c, _type_of(c)) for c in particle_columns()])
@@ -109,6 +112,7 @@ def _type_of(column: str) -> pa.DataType:
     return pa.string() if column in _TEXT else pa.bool_() if column in _BOOL else pa.float64()
 
 
+@functools.cache
 def pore_schema() -> pa.Schema:
     """Arrow schema of pores.parquet: lengths in micrometres, each with its twin in pixels."""
     fields = [(name, pa.string()) for name in ("batch", "image", "particle")]
@@ -198,7 +202,7 @@ def parquet_bytes(table: pa.Table) -> bytes:
 
 
 class ParquetStream:
-    """Writes a Parquet file from many small tables, gathering them into row groups of useful size.
+    """Writes a Parquet file from many small tables or rows, gathering them into row groups of useful size.
 
     Parameters
     ----------
@@ -208,13 +212,13 @@ class ParquetStream:
         Its columns; written also when no row comes.
     """
 
-    _ROWS = 50_000
+    _ROWS, _TABLES, _PLAIN_ROWS = 50_000, 400, 500
 
     def __init__(self, path: Path, schema: pa.Schema) -> None:
         self._writer = pq.ParquetWriter(path, schema, compression="zstd")
         self._schema = schema
-        self._waiting: list[pa.Table] = []
-        self._rows = 0
+        self._tables: list[pa.Table] = []
+        self._plain: list[Mapping[str, Any]] = []
 
     def add(self, table: pa.Table) -> None:
         """Append a table.
@@ -224,15 +228,29 @@ class ParquetStream:
         table
             Rows of the declared schema.
         """
-        self._waiting.append(table.cast(self._schema))
-        self._rows += table.num_rows
-        if self._rows >= self._ROWS:
+        self._tables.append(table.cast(self._schema))
+        if len(self._tables) >= self._TABLES or sum(t.num_rows for t in self._tables) >= self._ROWS:
+            self._flush()
+
+    def add_rows(self, rows: Iterable[Mapping[str, Any]]) -> None:
+        """Append rows that are plain dicts; undefined values are None.
+
+        Parameters
+        ----------
+        rows
+            Rows with the columns of the schema.
+        """
+        self._plain.extend(rows)
+        if len(self._plain) >= self._PLAIN_ROWS:
             self._flush()
 
     def _flush(self) -> None:
-        if self._rows:
-            self._writer.write_table(pa.concat_tables(self._waiting).combine_chunks(), row_group_size=self._rows)
-        self._waiting, self._rows = [], 0
+        if self._plain:
+            self._tables.append(pa.Table.from_pylist(self._plain, schema=self._schema))
+        table = pa.concat_tables(self._tables).combine_chunks() if self._tables else None
+        if table is not None and table.num_rows:
+            self._writer.write_table(table, row_group_size=table.num_rows)
+        self._tables, self._plain = [], []
 
     def close(self) -> None:
         """Write what is left and finish the file."""

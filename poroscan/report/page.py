@@ -38,6 +38,9 @@ _BESIDE = (
     "equivalent_diameter_um",
 )
 
+#: Pictures without a particle that are shown of each batch; the others stand in the table of what was left out.
+_MOST_EMPTY = 20
+
 _SOURCES: Mapping[str, str] = {
     "option": "given by the user",
     "sidecar": "sidecar table",
@@ -159,10 +162,12 @@ def _pictures(batch: str, keys: Sequence[Key], shown: _Shown) -> Iterator[dict[s
     by_image: dict[str, list[Key]] = {}
     for key in keys:
         by_image.setdefault(key[1], []).append(key)
+    empty = 0
     for line in shown.data.inputs:
         if line["batch"] != batch or line["folder"] is None:
             continue
-        if line["image"] in by_image or line["outcome"] == "no_particle":
+        empty += line["outcome"] == "no_particle"
+        if line["image"] in by_image or (line["outcome"] == "no_particle" and empty <= _MOST_EMPTY):
             yield _picture(line, by_image.get(line["image"], []), shown)
 
 
