@@ -85,9 +85,9 @@ def load_checkpoint(path: str | Path, *, fingerprint: str, seed: int) -> Checkpo
         If the file is damaged, of another format, or of another formulation or seed.
     """
     try:
-        with np.load(path, allow_pickle=False) as data:
+        with open(path, "rb") as stream, np.load(stream, allow_pickle=False) as data:
             arrays = {name: data[name] for name in data.files}
-    except (OSError, ValueError, zipfile.BadZipFile, EOFError) as error:
+    except (OSError, ValueError, KeyError, zipfile.BadZipFile, EOFError) as error:
         raise StoreError(f"{path}: the checkpoint cannot be read ({error}); delete it to start anew") from error
     if "format" not in arrays or int(arrays["format"]) != FORMAT:
         raise StoreError(f"{path}: is no checkpoint of this version (format {FORMAT}); delete it to start anew")

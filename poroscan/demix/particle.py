@@ -195,6 +195,7 @@ def _recorder(formulation: Formulation, diagram: PhaseDiagram) -> PathRecorder:
         dope_polymer=formulation.dope.polymer,
         margin=INTERFACE_WIDTHS * width + 2 * settings.roughness * settings.radius,
         arrest_fraction=settings.arrest_fraction,
+        noise=settings.noise,
         lean_fraction=Lever(diagram).lean_fraction,
         stability=stability,
     )

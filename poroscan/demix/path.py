@@ -17,9 +17,11 @@ FloatArray = npt.NDArray[np.float64]
 
 #: Interface widths below the surface that do not count as interior.
 INTERFACE_WIDTHS = 2.0
-#: Spread of polymer fraction within a shell from which on it counts as demixed, and multiple of the thermal spread.
+#: Spread of polymer fraction within a shell from which on it counts as demixed; thermal spread of the smoothed field of a
+#: mixture with curvature of about 1, over the root of the noise's strength, and the multiple of it that counts.
 LEAST_SPREAD = 0.08
-THERMAL_MULTIPLE = 3.0
+_THERMAL_SPREAD = 0.3
+_THERMAL_MULTIPLE = 3.0
 #: Shells averaged over before a spread counts, in cells.
 _LAYER = 3
 #: Window in cells over which the radial profile may bend without counting as spread.
@@ -114,6 +116,8 @@ class PathRecorder:
         Depth in cells that does not count as interior: two interface widths and the roughness of the surface.
     arrest_fraction
         Polymer fraction of arrest.
+    noise
+        Strength of the thermal noise, which sets what spread is thermal.
     lean_fraction, stability
         Lever rule and stability of a composition (φn, φp).
     """
@@ -126,6 +130,7 @@ class PathRecorder:
         dope_polymer: float,
         margin: float,
         arrest_fraction: float,
+        noise: float,
         lean_fraction: Callable[[float, float], float],
         stability: Callable[[float, float], float],
     ) -> None:
@@ -138,7 +143,7 @@ class PathRecorder:
         self.rows: list[PathRow] = []
         self.demixings: list[FirstDemixing] = []
         self._demixed = np.zeros(self._shells, bool)
-        self.thermal = np.nan
+        self._threshold = max(LEAST_SPREAD, _THERMAL_MULTIPLE * _THERMAL_SPREAD * noise**0.5)
         self._last: npt.NDArray[np.floating] | None = None
 
     def record(self, time: float, polymer: npt.NDArray[np.floating], nonsolvent: npt.NDArray[np.floating]) -> PathRow:
@@ -151,11 +156,7 @@ class PathRecorder:
         surface = self._surface(p)
         spread = np.sqrt(_layered(variance, self._count[: self._shells]))
         inside = np.arange(self._shells) < max(surface - self._margin, 0)
-        if np.isnan(self.thermal):
-            self.thermal = 0.0  # the first row knows only the noise of the start
-        elif len(self.rows) <= 2 and inside.any():
-            self.thermal = max(self.thermal, float(np.median(spread[inside])))
-        fresh = inside & ~self._demixed & (spread > max(LEAST_SPREAD, THERMAL_MULTIPLE * self.thermal))
+        fresh = inside & ~self._demixed & (spread > self._threshold)
         row = self._row(time, surface, p, n, spread, inside, fresh, polymer, smooth)
         self.rows.append(row)
         return row
@@ -239,7 +240,6 @@ class PathRecorder:
             "path_rows": rows,
             "path_demixings": found,
             "path_demixed": self._demixed.astype(float),
-            "path_thermal": np.array([self.thermal]),
             "path_last_field": np.zeros(0) if self._last is None else self._last,
         }
 
@@ -248,7 +248,6 @@ class PathRecorder:
         self.rows = [PathRow(*map(float, row)) for row in state["path_rows"]]
         self.demixings = [FirstDemixing(*map(float, row)) for row in state["path_demixings"]]
         self._demixed = state["path_demixed"].astype(bool)
-        self.thermal = float(state["path_thermal"][0])
         if state["path_last_field"].size:
             self._last = state["path_last_field"]
 
