@@ -8,7 +8,8 @@ pictures        which reader; tiffs, rasters: the readers; stored: what they han
 grey            from stored samples to grey 0…1
 sidecar         the table beside the pictures
 headers         pixel sizes written in headers; pixel_size: which source counts
-banner          the data banner; scale_bar, ocr: the scale bar and its label
+banner          the data banner; lettering: letters in it
+scale_bar       strokes that may be the bar; label_place, ocr, scale_label, bar_reading: what it stands for
 image_quality   clipping, noise, resolution, illumination, charging
 inspection      a folder looked over; contact_sheet: the same as a picture
 fields          simulated fields; field_readers, vtk: their formats; field_sections: from array to Section

@@ -14,8 +14,8 @@ import numpy.typing as npt
 
 from poroscan.intake.lettering import Box, ink_boxes, letters, longest_line
 
-#: Largest share of the picture's rows that a banner may take.
-MAX_SHARE = 0.3
+#: Largest share of the picture's rows, and most rows, that a banner may take.
+MAX_SHARE, MAX_ROWS = 0.3, 1200
 
 _MIN_ROWS = 10
 _TOLERANCE = (1.5 / 255, 14.0 / 255)
@@ -70,7 +70,7 @@ def find_banner(grey: npt.NDArray[np.float32]) -> int:
     rows, columns = grey.shape
     if rows < 3 * _MIN_ROWS or columns < 40:
         return 0
-    deepest = min(rows - _MIN_ROWS, max(int(MAX_SHARE * rows), 2 * _MIN_ROWS))
+    deepest = min(rows - _MIN_ROWS, min(MAX_ROWS, max(int(MAX_SHARE * rows), 2 * _MIN_ROWS)))
     bottom = stretched(grey)[rows - deepest :]
     strip = _strip(bottom)
     start = _flat_from(strip.flat)

@@ -11,9 +11,10 @@ import numpy.typing as npt
 from poroscan.errors import MissingExtraError
 from poroscan.intake import ocr
 from poroscan.intake.banner import stretched
+from poroscan.intake.label_place import is_piece, label_boxes
 from poroscan.intake.lettering import Box
 from poroscan.intake.pixel_size import Candidate
-from poroscan.intake.scale_bar import ScaleBar, find_scale_bars, is_piece, label_boxes
+from poroscan.intake.scale_bar import ScaleBar, find_scale_bars
 from poroscan.intake.scale_label import parse_label, plausible
 
 #: Letters lower than this are not read with certainty.

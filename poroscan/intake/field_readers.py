@@ -92,9 +92,9 @@ def _tiff(path: Path, max_voxels: int) -> Loaded:
     import tifffile
 
     from poroscan.intake.headers import ome_spacing
-    from poroscan.intake.tiffs import refuse_truncated
+    from poroscan.intake.tiffs import quiet, refuse_truncated
 
-    with tifffile.TiffFile(path) as file:
+    with quiet(), tifffile.TiffFile(path) as file:
         series = file.series[0]
         _check_size(series.shape, max_voxels)
         for page in series.pages:

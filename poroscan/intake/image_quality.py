@@ -199,7 +199,7 @@ def band_rows(grey: Grey, *, least: float) -> npt.NDArray[np.int64]:
     array of int
         Row numbers.
     """
-    window = 2 * (max(41, grey.shape[0] // 16) // 2) + 1
+    window = 2 * (min(201, max(41, grey.shape[0] // 16)) // 2) + 1
     if grey.shape[0] < 2 * window or grey.shape[1] < 16:
         return np.empty(0, np.int64)
     parts = np.array_split(grey, 6, axis=1)

@@ -12,6 +12,7 @@ import numpy as np
 import numpy.typing as npt
 import tifffile
 
+from poroscan.errors import InputError
 from poroscan.intake.files import bad_input
 from poroscan.intake.grey import to_luminance
 from poroscan.intake.stored import Resolution, Stored, too_many_pixels, upright
@@ -42,13 +43,18 @@ def read_tiff(path: Path, *, page: int, max_pixels: int) -> Stored:
     InputError
         If the file is corrupt or truncated, has no such page, is too large, or holds samples that are not grey or colour.
     """
-    with _quiet():
+    with quiet():
         try:
             file = tifffile.TiffFile(path)
         except Exception as error:  # the reader's own errors are of many types
             raise bad_input(path, f"has a corrupt TIFF header ({_short(error)})", "export it again") from None
         with file:
-            return _read(file, path, page, max_pixels)
+            try:
+                return _read(file, path, page, max_pixels)
+            except InputError:
+                raise
+            except Exception as error:  # tags of a corrupt file may be of any type
+                raise bad_input(path, f"has corrupt TIFF tags ({_short(error)})", "export it again") from None
 
 
 def _read(file: Any, path: Path, number: int, max_pixels: int) -> Stored:
@@ -254,7 +260,7 @@ def _header(page: Any) -> dict[str, str]:
 
 
 @contextmanager
-def _quiet() -> Iterator[None]:
+def quiet() -> Iterator[None]:
     """Keep the reader's log lines off the terminal; what matters is raised as an error or noted."""
     logger = logging.getLogger("tifffile")
     handler = logging.NullHandler()
