@@ -79,11 +79,22 @@ def split_bodies(pores: BoolArray, distance: Float32, *, split_depth: float) -> 
         raise ValueError(f"split_depth must lie between 0 and 1, not {split_depth!r}")
     shape = (1, *pores.shape) if pores.ndim == 2 else pores.shape
     flat = np.ascontiguousarray(distance).ravel()
-    # d² + 1 is an integer; equal distances are flooded in the order of the array.
-    level = np.where(np.isfinite(flat), np.rint(np.square(flat + np.float32(0.5))), np.float32(1)).astype(np.int32)
-    order = _deepest_first(level, pores.ravel(), int(level.max(initial=0)))
+    inside = np.ascontiguousarray(pores).ravel()
+    level = _levels(flat, inside)
+    order = _deepest_first(level, inside, int(level.max(initial=0)))
+    del level
     labels, n = _flood(order, flat, shape, np.float32(1.0 - split_depth))
     return labels.reshape(pores.shape), int(n)
+
+
+@numba.njit(cache=True)
+def _levels(distance, inside):  # type: ignore[no-untyped-def]
+    """Squared distance to the nearest pixel outside, an integer; 1 everywhere where nothing lies outside."""
+    level = np.zeros(distance.size, dtype=np.int32)
+    for i in range(distance.size):
+        if inside[i]:
+            level[i] = int((distance[i] + 0.5) ** 2 + 0.5) if np.isfinite(distance[i]) else 1
+    return level
 
 
 @numba.njit(cache=True)
