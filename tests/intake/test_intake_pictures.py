@@ -121,8 +121,9 @@ def test_equal_channels_and_alpha_lose_nothing(tmp_path: Path, ramp: np.ndarray)
 def test_cmyk(tmp_path: Path) -> None:
     ink = np.zeros((16, 16, 4), np.uint8)
     ink[:, 8:, 3] = 255  # black on the right
-    Image.fromarray(ink, mode="CMYK").save(tmp_path / "a.jpg", quality=100)
-    Image.fromarray(ink, mode="CMYK").save(tmp_path / "a.tif")
+    picture = Image.merge("CMYK", [Image.fromarray(np.ascontiguousarray(ink[..., i])) for i in range(4)])
+    picture.save(tmp_path / "a.jpg", quality=100)
+    picture.save(tmp_path / "a.tif")
     for name in ("a.jpg", "a.tif"):
         picture = load_picture(tmp_path / name, PLAIN)
         np.testing.assert_allclose(picture.grey[:, [0, 15]], [[1, 0]] * 16, atol=0.02)
