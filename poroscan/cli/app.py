@@ -45,6 +45,7 @@ COMMANDS: tuple[str, ...] = (
     "compare",
     "render",
     "phases",
+    "simulate",
     "score",
 )
 

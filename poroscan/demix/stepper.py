@@ -113,8 +113,8 @@ class Stepper:
         _check_fields(polymer, nonsolvent)
         if polymer.shape != self._shape:
             raise ValueError(f"polymer must have the shape of the box, {self._shape}, not {polymer.shape}")
-        for padded, field in ((self._p, polymer), (self._n, nonsolvent)):
-            self._inner(padded)[...] = field
+        for padded, values in ((self._p, polymer), (self._n, nonsolvent)):
+            self._inner(padded)[...] = values
             kernels.wrap(padded)
 
     def _inner(self, padded: FloatArray) -> FloatArray:

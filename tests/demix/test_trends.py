@@ -6,6 +6,7 @@ properties of the simulated path, never truth labels.
 
 from __future__ import annotations
 
+import itertools
 import math
 
 import pytest
@@ -27,9 +28,7 @@ def _onsets(seeds, **chemistry):
 @pytest.mark.slow
 def test_demixing_comes_sooner_with_chi_pn():
     series = [_onsets(range(5), pn=pn, sn=0.5, dope=0.3) for pn in (1.2, 1.7, 2.2, 2.8)]
-    monotone = sum(
-        all(a >= b for a, b in zip(onsets, onsets[1:], strict=False)) for onsets in zip(*series, strict=True)
-    )
+    monotone = sum(all(a >= b for a, b in itertools.pairwise(onsets)) for onsets in zip(*series, strict=True))
     assert monotone >= 4
     assert min(series[0]) > 0.3
     assert max(series[-1]) < 0.2
@@ -38,9 +37,7 @@ def test_demixing_comes_sooner_with_chi_pn():
 @pytest.mark.slow
 def test_demixing_is_lost_when_solvent_and_nonsolvent_do_not_mix():
     series = [_onsets(range(5), pn=2.5, sn=sn, dope=0.3) for sn in (0.3, 1.0, 1.5, 2.2)]
-    monotone = sum(
-        all(a <= b for a, b in zip(onsets, onsets[1:], strict=False)) for onsets in zip(*series, strict=True)
-    )
+    monotone = sum(all(a <= b for a, b in itertools.pairwise(onsets)) for onsets in zip(*series, strict=True))
     assert monotone >= 4
     assert max(series[0]) < 0.2
     assert all(math.isinf(onset) for onset in series[-1])
