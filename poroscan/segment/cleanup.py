@@ -69,14 +69,14 @@ def shading(grey: Float32, inside: BoolArray, *, degree: int = 2) -> Float32:
     values = grey[rows, columns].astype(np.float64)
     half = np.array([max(n - 1, 1) / 2 for n in grey.shape])
     basis = _basis((rows / half[0]) - 1, (columns / half[1]) - 1, degree)
-    weight = np.ones(values.size)
-    coefficients = np.zeros(basis.shape[1])
+    weight: npt.NDArray[np.floating] = np.ones(values.size)
+    coefficients: npt.NDArray[np.floating] = np.zeros(basis.shape[1])
     for _ in range(12):
         coefficients = np.linalg.lstsq(basis * weight[:, None], values * weight, rcond=None)[0]
         residual = values - basis @ coefficients
-        residual -= _half_sample_mode(residual)
+        residual = residual - _half_sample_mode(residual)
         scale = 1.4826 * float(np.median(np.abs(residual))) + 1e-9
-        weight = np.sqrt(np.clip(1 - (residual / (2.5 * scale)) ** 2, 0, None))
+        weight = np.sqrt(np.clip(1 - (residual / (2.5 * scale)) ** 2, 0, None)).astype(np.float64)
     return _surface(coefficients, grey.shape, degree, float((basis @ coefficients).mean()))
 
 

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -27,7 +28,7 @@ class Drawn:
     labels
         int32 (row, column), 0 outside, particles from 1 on.
     raw
-        Pixels that belong to a particle by their own grey value; None where the outline was found by texture.
+        Pixels that belong to a particle by their own grey value; None where the outline was found by texture or by the pores alone.
     split
         Labels that were separated from a touching particle.
     notes
@@ -77,10 +78,16 @@ def draw_particles(grey: Float32, best: Candidate, step: int, settings: SegmentS
         if (own > 0).sum() > 1:
             split.add(number)
         notes.append(f"particle {number}: closing by {used:.0f} pixels added {100 * gain:.1f} % to the area")
-    return Drawn(labels, feature if best.name in BY_GREY else None, frozenset(split), tuple(notes))
+    known = best.name == "pale" or (best.name == "dark" and _in_one_piece(feature & (labels > 0)))
+    return Drawn(labels, feature if known else None, frozenset(split), tuple(notes))
 
 
-def _enlarge(coarse: npt.NDArray[np.generic], shape: tuple[int, ...], step: int) -> npt.NDArray[np.generic]:
+def _in_one_piece(mask: BoolArray) -> bool:
+    """Whether a third of a mask hangs together: dark spots that do not are pores in walls as grey as the ground."""
+    return _largest_area(mask) >= 0.33 * float(mask.sum())
+
+
+def _enlarge(coarse: npt.NDArray[Any], shape: tuple[int, ...], step: int) -> npt.NDArray[Any]:
     return np.repeat(np.repeat(coarse, step, axis=0), step, axis=1)[: shape[0], : shape[1]]
 
 

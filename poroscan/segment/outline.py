@@ -152,7 +152,7 @@ def candidate(name: str, grey: Float32, *, radius: float | None) -> Candidate | 
         return None
     first = _closed(name, feature, level, radius)
     ground = feature[~first.bodies]
-    if name in BY_GREY and ground.size > 100:
+    if name in BY_GREY and ground.size > 100 and first.raw.any():
         level = _clear_of_ground(ground, feature[first.raw], level)
         first = _closed(name, feature, level, radius)
     if radius is not None or first.quality >= 0.6:
@@ -181,7 +181,7 @@ def _sharp_bodies(feature: Float32, raw: BoolArray, bodies: BoolArray) -> BoolAr
     Sharpness is the range of the feature within two pixels of the border over the contrast of particle and ground.
     """
     labels, count = ndimage.label(bodies)
-    if count == 0 or bodies.all():
+    if count == 0 or bodies.all() or not raw.any():
         return bodies
     contrast = float(np.median(feature[raw])) - float(np.median(feature[~bodies]))
     rim = bodies & ~ndimage.binary_erosion(bodies, iterations=3, border_value=1)
@@ -207,7 +207,8 @@ def quality(name: str, feature: Float32, raw: BoolArray, bodies: BoolArray) -> f
     holes = bodies & ~raw
     width = inner_radius(ground)
     hole = inner_radius(holes) if holes.any() else 0.0
-    if frame < 0.08 or width < max(2.5 * hole, 0.04 * math.sqrt(bodies.size)):
+    least = (0.04 if name in BY_GREY else 0.1) * math.sqrt(bodies.size)
+    if frame < 0.08 or width < max(2.5 * hole, least):
         return 0.0
     solid = _solidity(bodies)
     if solid < 0.8 or _like_pores(name, feature, raw, bodies):

@@ -99,7 +99,7 @@ def _nothing(shape: tuple[int, ...], flags: tuple[str, ...]) -> Segmentation:
     return Segmentation("whole", (), np.zeros(shape, np.int32), np.zeros(shape, bool), "none", None, flags)
 
 
-def _particles(grey: Float32, settings: SegmentSettings, given: npt.NDArray[np.generic] | None) -> _Found:
+def _particles(grey: Float32, settings: SegmentSettings, given: npt.NDArray[np.integer] | BoolArray | None) -> _Found:
     if given is not None:
         # a mask of one value holds particles only by their being apart; several values are numbers of particles
         one_value = np.unique(given[given > 0]).size <= 1
@@ -122,7 +122,8 @@ def _particles(grey: Float32, settings: SegmentSettings, given: npt.NDArray[np.g
     if not drawn.labels.any():
         return _Found("whole", drawn.labels, "none", flags=("no_particle",))
     method = f"outline: {best.name}"
-    return _Found(_view_of(drawn.labels, settings), drawn.labels, method, drawn.raw, drawn.split, (), drawn.notes)
+    flags = ("outline_uncertain",) if drawn.raw is None else ()
+    return _Found(_view_of(drawn.labels, settings), drawn.labels, method, drawn.raw, drawn.split, flags, drawn.notes)
 
 
 def _interior(shape: tuple[int, ...]) -> _Found:
@@ -214,6 +215,8 @@ def _view_flags(found: _Found, k: int, cut: bool) -> tuple[str, ...]:
     flags: tuple[str, ...] = {"edge": ("edge_view",), "interior": ("interior_view",), "whole": ()}[found.view]
     if cut and found.view != "interior":
         flags = (*flags, "touches_frame")
+    if "outline_uncertain" in found.flags:
+        flags = (*flags, "outline_uncertain")
     return (*flags, "split_from_touching") if k in found.split else flags
 
 

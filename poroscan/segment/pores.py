@@ -87,8 +87,15 @@ def auto(inside: Inside, settings: SegmentSettings) -> Pores:
         level = levels.limit
         uncertainty = math.hypot(0.5 * levels.spread, inside.noise)
         method = "lower limit of the material's grey values"
-    shrink = math.isfinite(levels.pore)
+    shrink = math.isfinite(levels.pore) or _within_blur(inside)
     return _banded(inside, settings, lambda s: inside.grey < level + s, level, uncertainty, method, shrink=shrink)
+
+
+def _within_blur(inside: Inside) -> bool:
+    """Whether the limit is nearer to the material than a tenth of the contrast, where the blur of an edge still reaches."""
+    levels = inside.levels
+    dark = np.percentile(inside.grey[inside.mask & (inside.grey < levels.limit)], 25)
+    return levels.material - levels.limit < 0.1 * (levels.material - float(dark))
 
 
 def global_threshold(inside: Inside, settings: SegmentSettings) -> Pores:

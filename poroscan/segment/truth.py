@@ -8,8 +8,11 @@ from pathlib import Path
 
 import numpy as np
 import numpy.typing as npt
+import tifffile
 
 from poroscan.errors import InputError
+from poroscan.intake.pictures import read_stored
+from poroscan.intake.settings import IntakeSettings
 from poroscan.section import BoolArray
 from poroscan.segment.scoring import Score, score_masks
 
@@ -75,12 +78,13 @@ def _found(folder: Path) -> Iterator[tuple[str, BoolArray, BoolArray | None]]:
     if (folder / "images").is_dir():
         images = folder / "images"
         for file in sorted(images.rglob("labels.ome.tif")):
-            planes = _read(file)
+            planes = _planes(file)
             if planes.ndim != 3 or planes.shape[0] < 2:
                 raise InputError(
                     f"{file}: expected two planes (particles, pores), not shape {planes.shape}; run the scan again"
                 )
-            yield file.parent.relative_to(images).as_posix(), planes[1] > 0, planes[0] > 0
+            labels = np.asarray(planes, dtype=np.int64)
+            yield file.parent.relative_to(images).as_posix(), labels[1] > 0, labels[0] > 0
         return
     for file in sorted(folder.iterdir()):
         if file.stem.endswith("_pores") and file.suffix.lower() in _SUFFIXES:
@@ -101,33 +105,18 @@ def _mask_file(folder: Path, name: str, kind: str) -> Path | None:
 
 
 def read_mask(path: Path) -> BoolArray:
-    """A mask from a picture file: every pixel that is not 0 is True; colour counts if any channel is not 0 (alpha does not).
+    """A mask from a picture file: every pixel that is not black is True; alpha does not count.
 
     Raises
     ------
     InputError
         If the file cannot be read as a picture.
     """
-    picture = _read(path)
-    if picture.ndim == 3:
-        channels = picture.shape[2]
-        picture = picture[..., : channels - 1 if channels in (2, 4) else channels].any(axis=2)
-    return np.asarray(picture != 0)
+    return np.asarray(read_stored(path, IntakeSettings()).values != 0)
 
 
-def _read(path: Path) -> npt.NDArray[np.generic]:
-    from skimage.io import imread
-
-    try:
-        return np.asarray(imread(path) if path.suffix.lower() not in (".tif", ".tiff") else _read_tiff(path))
-    except (OSError, ValueError, SyntaxError) as error:
-        raise InputError(f"{path}: cannot be read as a picture ({error}); save it as PNG or TIFF") from error
-
-
-def _read_tiff(path: Path) -> npt.NDArray[np.generic]:
-    import tifffile
-
+def _planes(path: Path) -> npt.NDArray[np.generic]:
     try:
         return np.asarray(tifffile.imread(path))
-    except tifffile.TiffFileError as error:
-        raise ValueError(str(error)) from error
+    except (OSError, ValueError, tifffile.TiffFileError) as error:
+        raise InputError(f"{path}: cannot be read ({error}); run the scan again") from error
