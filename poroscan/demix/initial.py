@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+
 import numpy as np
 import numpy.typing as npt
 
@@ -37,7 +39,7 @@ def initial_fields(formulation: Formulation, *, rng: np.random.Generator) -> tup
     return fields[0], fields[1]
 
 
-def _roughness(axes: list[FloatArray], distance: FloatArray, modes: int, rng: np.random.Generator) -> FloatArray:
+def _roughness(axes: Sequence[FloatArray], distance: FloatArray, modes: int, rng: np.random.Generator) -> FloatArray:
     if len(axes) == 2:
         angle = np.arctan2(*axes)
         numbers = np.arange(2, modes + 1)

@@ -1,3 +1,5 @@
+# mypy: disallow-untyped-defs=False, disallow-incomplete-defs=False, check-untyped-defs=False
+# numba infers the types of compiled functions; annotations would say less than the docstrings.
 """Compiled loops of the particle solver; the formulas stand in docs/simulation.md.
 
 Fields are stored as rows along the last axis, each with one ghost cell at either end: shape (rows, columns + 2), in 2-D
@@ -17,7 +19,7 @@ _FAST = {"cache": True, "fastmath": _FLAGS, "error_model": "numpy", "nogil": Tru
 
 
 @njit(**_FAST)
-def wrap(field):  # type: ignore[no-untyped-def]
+def wrap(field):
     """Copy the end columns of every row into its ghost cells."""
     last = field.shape[1] - 2
     for r in range(field.shape[0]):
@@ -26,7 +28,7 @@ def wrap(field):  # type: ignore[no-untyped-def]
 
 
 @njit(**_FAST)
-def potentials(p, n, par, off_rows, off_weights, cells, buf):  # type: ignore[no-untyped-def]
+def potentials(p, n, par, off_rows, off_weights, cells, buf):
     """Cell values needed by the fluxes, into ``cells``: exchange potentials without their ideal part (interaction and
     gradient energy) of polymer and of non-solvent against solvent; square root of the arrest factor times the polymer's
     mobility; the three fractions, at least ``tiny`` (the caller takes their logarithms, which numpy has vectorised).
@@ -102,7 +104,7 @@ def _link(
     c,
     f_p,
     f_n,
-):  # type: ignore[no-untyped-def]
+):
     """Flux of polymer and non-solvent over one kind of link for one row: the formulas are in docs/simulation.md.
 
     The mean fraction of a link is the logarithmic mean (φ' − φ)/(ln φ' − ln φ), by its series where the two are near. With it
@@ -133,7 +135,7 @@ def _link(
 
 
 @njit(**_FAST)
-def _link_still(p0, p1, n0, n1, ep0, ep1, en0, en1, a0, a1, x0, x1, y0, y1, z0, z1, i_p, i_s, i_n, weight, c, f_p, f_n):  # type: ignore[no-untyped-def]
+def _link_still(p0, p1, n0, n1, ep0, ep1, en0, en1, a0, a1, x0, x1, y0, y1, z0, z1, i_p, i_s, i_n, weight, c, f_p, f_n):
     """The same without thermal flux."""
     one, half, tiny, near, c_1, c_2, c_3 = c
     for j in range(f_p.size):
@@ -158,7 +160,7 @@ def _link_still(p0, p1, n0, n1, ep0, ep1, en0, en1, a0, a1, x0, x1, y0, y1, z0, 
 
 
 @njit(**_FAST)
-def _random(base, key0, key1, amp, middle, x, y, z):  # type: ignore[no-untyped-def]
+def _random(base, key0, key1, amp, middle, x, y, z):
     """Three uniform numbers of standard deviation ``amp``·(1/unit) from one hashed counter for each column."""
     c1, c2, c3 = np.uint32(0x9E3779B9), np.uint32(0x85EBCA6B), np.uint32(0xC2B2AE35)
     mask = np.uint32(1023)
@@ -174,7 +176,7 @@ def _random(base, key0, key1, amp, middle, x, y, z):  # type: ignore[no-untyped-
 
 
 @njit(**_FAST)
-def rates(p, n, cells, par, links, shifts, weights, noise, key0, key1, out_p, out_n, buf):  # type: ignore[no-untyped-def]
+def rates(p, n, cells, par, links, shifts, weights, noise, key0, key1, out_p, out_n, buf):
     """Divergence of the fluxes (deterministic and thermal) over all links; every link is visited once.
 
     ``links[l, r]``: the row that row r meets over link l; ``shifts[l]``: its shift in columns; ``weights[l]``: weight of the link.
@@ -224,7 +226,7 @@ def rates(p, n, cells, par, links, shifts, weights, noise, key0, key1, out_p, ou
 
 
 @njit(**_FAST)
-def advance(field, change):  # type: ignore[no-untyped-def]
+def advance(field, change):
     """Add ``change`` (rows, columns) to the inner cells and renew the ghosts."""
     rows, columns = change.shape
     for r in range(rows):

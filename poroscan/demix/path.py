@@ -9,6 +9,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import asdict, dataclass, fields
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -232,7 +233,7 @@ class PathRecorder:
         changed = np.abs(smooth - last).ravel()[self._shell <= surface] > _MOVED
         return float(changed.mean())
 
-    def state(self) -> dict[str, FloatArray]:
+    def state(self) -> dict[str, npt.NDArray[Any]]:
         """Everything needed to go on recording, as arrays (for checkpoints)."""
         rows = np.array([list(asdict(row).values()) for row in self.rows]).reshape(-1, len(PATH_COLUMNS))
         found = np.array([list(asdict(d).values()) for d in self.demixings]).reshape(-1, len(fields(FirstDemixing)))
@@ -243,7 +244,7 @@ class PathRecorder:
             "path_last_field": np.zeros(0) if self._last is None else self._last,
         }
 
-    def restore(self, state: dict[str, FloatArray]) -> None:
+    def restore(self, state: dict[str, npt.NDArray[Any]]) -> None:
         """Take up the state of an earlier recorder of the same formulation."""
         self.rows = [PathRow(*map(float, row)) for row in state["path_rows"]]
         self.demixings = [FirstDemixing(*map(float, row)) for row in state["path_demixings"]]

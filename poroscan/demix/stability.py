@@ -62,7 +62,7 @@ def interface_width(mixture: Mixture, settings: SimulationSettings) -> float:
     used with the barrier above the line from end to end of the polymer–non-solvent edge; inf where there is none.
     """
     p = np.linspace(1e-4, 1 - 1e-4, 400)
-    f = mixture.free_energy(1 - p, p)
+    f = np.asarray(mixture.free_energy(1 - p, p), float)
     hull, (left, right) = _hull(p, f)
     barrier = float((f - hull).max())
     if barrier <= 1e-9:
