@@ -84,7 +84,7 @@ def _basis(y: npt.NDArray[np.float64], x: npt.NDArray[np.float64], degree: int) 
     return np.stack([y**i * x**j for i in range(degree + 1) for j in range(degree + 1 - i)], axis=-1)
 
 
-def _surface(coefficients: npt.NDArray[np.float64], shape: tuple[int, ...], degree: int, mean: float) -> Float32:
+def _surface(coefficients: npt.NDArray[np.floating], shape: tuple[int, ...], degree: int, mean: float) -> Float32:
     y = np.linspace(-1, 1, shape[0])[:, None]
     x = np.linspace(-1, 1, shape[1])[None, :]
     powers = [(i, j) for i in range(degree + 1) for j in range(degree + 1 - i)]

@@ -133,13 +133,16 @@ def _modes(counts: Counts) -> list[tuple[int, float, int, int]]:
 def _material_peak(histogram: _Histogram, hint: float | None) -> int:
     flat = _modes(histogram.flat) if histogram.flat.sum() > 50 else []
     every = _modes(histogram.every)
-    if hint is None:
-        modes = flat or every
-        largest = max(mass for _, mass, _, _ in modes)
-        return max(top for top, mass, _, _ in modes if mass >= 0.35 * largest)
     total, flats = float(histogram.every.sum()), float(histogram.flat.sum())
+    if hint is None:
+        largest = max((mass for _, mass, _, _ in flat), default=0.0)
+        tops = [top for top, mass, _, _ in flat if mass >= 0.35 * largest]
+        # thin walls have no flat pixels: their mode shows among all pixels only
+        tops += [top for top, mass, _, _ in every if mass >= 0.15 * total]
+        return max(tops, default=int(np.argmax(histogram.every)))
     tops = [m[0] for m in flat if m[1] >= 0.03 * flats] + [m[0] for m in every if m[1] >= 0.05 * total]
-    return min(tops, key=lambda top: abs(float(histogram.centres[top]) - hint))
+    near = int(np.argmax(histogram.every))
+    return min(tops, key=lambda top: abs(float(histogram.centres[top]) - hint), default=near)
 
 
 def _spread(counts: Counts, peak: int) -> float:
