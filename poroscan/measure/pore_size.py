@@ -79,7 +79,7 @@ def part(section: Section, settings: MeasureSettings, *, shared: Shared, rng: np
     density = "pore_density" if section.ndim == 2 else "pore_density_3d"
     diameter = table["diameter"]
     estimates = {"pore_count": Estimate(float(diameter.size))}
-    block = _block_of(section, shared, table)
+    block = shared.blocks_of_bodies(table)
     number = np.where(table["touches_frame"], 0.5, 1.0)
     pixels = np.bincount(shared.blocks.ravel(), minlength=shared.n_blocks)[1:]
     result = block_ratio(
@@ -160,17 +160,6 @@ def _shapes(
         total = np.bincount(block, area * table[name][resolved], shared.n_blocks)[1:]
         estimates[f"pore_{name}"] = estimate_of(block_ratio(total, weight, inflation=shared.block_inflation))
     return estimates
-
-
-def _block_of(section: Section, shared: Shared, table: Mapping[str, npt.NDArray[Any]]) -> Int32:
-    """Block that holds the centroid of each body."""
-    origin = (0,) * (3 - len(section.origin)) + tuple(section.origin)
-    names = ("plane", "row", "col")[3 - section.ndim :]
-    index = tuple(
-        np.rint(table[f"centroid_{name}"] - start).astype(np.int64)
-        for name, start in zip(names, origin[3 - section.ndim :], strict=True)
-    )
-    return shared.block_at(index)
 
 
 def _flags(settings: MeasureSettings, estimates: Mapping[str, Estimate], n: int) -> tuple[str, ...]:

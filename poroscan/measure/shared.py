@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Mapping
 from functools import cached_property
 from typing import Any
 
@@ -122,6 +123,13 @@ class Shared:
             code = code * np.int32(-(-n // self.block_side)) + (i // self.block_side).astype(np.int32)
         return code + np.int32(1)
 
+    def blocks_of_bodies(self, table: Mapping[str, npt.NDArray[Any]]) -> Int32:
+        """Block that holds the centroid of each pore body of a table."""
+        names = ("plane", "row", "col")[3 - self.section.ndim :]
+        origin = ((0,) * 3 + tuple(self.section.origin))[-self.section.ndim :]
+        index = (np.rint(table[f"centroid_{n}"] - o).astype(np.int64) for n, o in zip(names, origin, strict=True))
+        return self.block_at(tuple(index))
+
     @cached_property
     def crossings(self) -> Crossings:
         """Crossings of test lines with pore boundaries, by direction and block."""
@@ -138,8 +146,14 @@ class Shared:
 
     @cached_property
     def pore_thickness(self) -> ThicknessTable:
-        """Local thickness of the pores, as a histogram by block."""
-        return thickness_table(self.section.pores, blocks=self.blocks)
+        """Local thickness of the pores, as a histogram by block.
+
+        The pixels of a pore body share one disc or a few, so that they all count in the block that holds its centroid: cut at
+        the borders of the blocks, neighbouring blocks would be alike and the sampling uncertainty a quarter too small.
+        """
+        labels, _ = self.bodies
+        block = np.concatenate([np.zeros(1, dtype=np.int32), self.blocks_of_bodies(self.pore_table)])
+        return thickness_table(self.section.pores, blocks=block[labels])
 
     @cached_property
     def wall_thickness(self) -> ThicknessTable:

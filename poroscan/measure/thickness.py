@@ -28,7 +28,7 @@ from __future__ import annotations
 
 import itertools
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
 import edt
@@ -38,7 +38,7 @@ import numpy.typing as npt
 
 from poroscan.measure.part import Part, undefined
 from poroscan.measure.settings import MeasureSettings
-from poroscan.measure.uncertainty import block_quantile, block_ratio, estimate_of, threshold_sd
+from poroscan.measure.uncertainty import BlockEstimate, block_quantile, block_ratio, estimate_of, threshold_sd
 from poroscan.quantities import Curve, Estimate
 from poroscan.section import BoolArray, Section
 
@@ -396,6 +396,8 @@ def _disc_word(rest, y0, x0, root):  # type: ignore[no-untyped-def]
     return word
 
 
+#: Values over which a pixel of thickness is spread for intervals.
+_SPREAD = 5
 _STATISTICS = ("d10", "d50", "d90", "span", "mean", "d50_number", "mean_number", "max")
 
 
@@ -419,18 +421,41 @@ def _statistics(table: ThicknessTable, inflation: float, median_sd: float | None
     weight = counts[block, column]
     out: dict[str, Estimate] = {}
     for name, q in (("d10", 0.1), ("d50", 0.5), ("d90", 0.9)):
-        result = block_quantile(d[column], weight, block, q=q, inflation=inflation)
+        result = _quantile(d[column], weight, block, q=q, inflation=inflation)
         out[name] = estimate_of(result, threshold=median_sd if name == "d50" else None, scale="log")
     out["span"] = Estimate((out["d90"].value - out["d10"].value) / out["d50"].value)
     mean = block_ratio((counts @ d)[1:], counts.sum(axis=1)[1:], inflation=inflation, scale="log")
     out["mean"] = estimate_of(mean, scale="log")
     each = d**-table.ndim
-    median = block_quantile(d[column], weight * each[column], block, q=0.5, inflation=inflation)
+    median = _quantile(d[column], weight * each[column], block, q=0.5, inflation=inflation)
     out["d50_number"] = estimate_of(median, scale="log")
     mean = block_ratio((counts @ (d * each))[1:], (counts @ each)[1:], inflation=inflation, scale="log")
     out["mean_number"] = estimate_of(mean, scale="log")
     out["max"] = Estimate(float(d[-1]))
     return out
+
+
+def _quantile(
+    d: npt.NDArray[np.float64],
+    weight: npt.NDArray[np.float64],
+    block: npt.NDArray[np.int64],
+    *,
+    q: float,
+    inflation: float,
+) -> BlockEstimate:
+    """Quantile with its interval. Thicknesses on the grid are few distinct values, known to half a pixel; the interval is that of
+    values spread over a pixel, moved to the quantile itself, since steps of the distribution would hide its slope."""
+    value = block_quantile(d, weight, block, q=q).value
+    spread = (np.arange(_SPREAD) + 0.5) / _SPREAD - 0.5
+    wide = block_quantile(
+        np.add.outer(spread, d).ravel(),
+        np.tile(weight / _SPREAD, _SPREAD),
+        np.tile(block, _SPREAD),
+        q=q,
+        inflation=inflation,
+    )
+    low, high = max(value + wide.low - wide.value, 0.0), value + wide.high - wide.value
+    return replace(wide, value=value, low=low, high=high)
 
 
 def _threshold(section: Section, shared: Shared) -> float | None:
