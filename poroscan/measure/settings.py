@@ -30,7 +30,7 @@ class MeasureSettings:
     radial_bins
         Number of steps of the radial profiles.
     skin_level
-        The skin ends where the porosity first reaches this share of the porosity of the section.
+        The skin ends where the porosity first reaches this share of the porosity below the skin.
     block_side_px
         Side of the blocks that are resampled for sampling intervals; 0 lets the structure choose.
     bootstrap_replicates
@@ -51,7 +51,7 @@ class MeasureSettings:
     core_fraction: float = 0.5
     shell_area_fraction: float = 0.5
     radial_bins: int = 20
-    skin_level: float = 0.5
+    skin_level: float = 0.25
     block_side_px: int = 0
     bootstrap_replicates: int = 400
     largest_lag_fraction: float = 0.5

@@ -9,6 +9,7 @@ from media import disc, level_cut
 from poroscan.measure import radial, skin
 from poroscan.measure.settings import MeasureSettings
 from poroscan.measure.shared import Shared
+from poroscan.render.bodies import make_body
 from poroscan.section import Circle, PixelSize, Section
 
 RADIUS = 250
@@ -86,6 +87,14 @@ def test_skin_of_a_rendered_particle(thickness, rng):
     assert e.value == pytest.approx(thickness, abs=max(1.0, 0.03 * thickness))
     assert e.low - 0.5 <= thickness <= e.high + 0.5
     assert part.estimates["skin_porosity"].value < 0.1
+
+
+@pytest.mark.parametrize("structure", ["sponge", "discs", "foam", "fingers", "graded"])
+@pytest.mark.parametrize("thickness", [6, 15])
+def test_skin_of_every_kind_of_particle(structure, thickness):
+    body = make_body(structure, radius=200, rng=3, skin=float(thickness))
+    e = measured(body.pores, body.particle).estimates["skin_thickness"]
+    assert e.value == pytest.approx(thickness, abs=1.0)
 
 
 def test_pores_open_to_the_outside_mean_no_skin(rng):
