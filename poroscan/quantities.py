@@ -370,7 +370,7 @@ PORE_COLUMNS: Mapping[str, PoreColumn] = MappingProxyType(
         "feret_max": PoreColumn("float64", 1, "largest Feret diameter; NaN in a volume"),
         "feret_min": PoreColumn("float64", 1, "smallest Feret diameter; NaN in a volume"),
         "circularity": PoreColumn(
-            "float64", 0, "sqrt(4 π A / P²) with the Crofton perimeter, at most 1; NaN in a volume"
+            "float64", 0, "sqrt(4 π A / P²) with the Crofton perimeter; may exceed 1 for small pores; NaN in a volume"
         ),
         "aspect_ratio": PoreColumn("float64", 0, "smallest over largest Feret diameter; NaN in a volume"),
         "ellipse_ratio": PoreColumn("float64", 0, "minor over major axis of the Legendre ellipse; NaN in a volume"),
