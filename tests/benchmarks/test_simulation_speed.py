@@ -39,7 +39,8 @@ def stepper(shape, precision="float32"):
     return Stepper(MIXTURE, settings, p, n)
 
 
-def _best(function, repeats, rounds=5):
+def _best(function, repeats, rounds=40):
+    """Shortest mean time; short rounds, so that other work on the machine does not get into all of them."""
     function()
     times = []
     for _ in range(rounds):
@@ -50,9 +51,7 @@ def _best(function, repeats, rounds=5):
     return min(times)
 
 
-@pytest.mark.parametrize(
-    ("shape", "repeats", "limit"), [((256, 256), 60, 4), ((448, 448), 20, 4), ((96, 96, 96), 3, 5)]
-)
+@pytest.mark.parametrize(("shape", "repeats", "limit"), [((256, 256), 3, 4), ((448, 448), 1, 4), ((96, 96, 96), 1, 5)])
 def test_step_against_its_transforms(shape, repeats, limit):
     run = stepper(shape)
     field = run.fields()[0]

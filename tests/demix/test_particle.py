@@ -194,7 +194,7 @@ def test_pores_are_demixing_where_they_are():
     drop, distance = _drop()
     recorder.record(0.0, drop, 0.1 + 0 * drop)
     y, x = np.mgrid[:64, :64]
-    pores = (np.sin(2 * np.pi * x / 12) * np.sin(2 * np.pi * y / 12) > 0.1) & (distance > 12) & (distance < 20)
+    pores = (np.sin(2 * np.pi * x / 10) * np.sin(2 * np.pi * y / 10) > 0) & (distance > 12) & (distance < 20)
     row = recorder.record(30.0, np.where(pores, 0.02, drop), 0.1 + 0 * drop)
     assert 0.5 < row.demixed < 0.95
     assert row.front_depth == pytest.approx((24 - 12) / 24, abs=0.1)
