@@ -100,7 +100,9 @@ def mouth_radius(raw: BoolArray) -> float:
 MOUTH = 0.125
 
 
-def close_body(body: BoolArray, *, radius: float | None, pore: float = 0.0) -> tuple[BoolArray, float]:
+def close_body(
+    body: BoolArray, *, radius: float | None, pore: float = 0.0, holes: float = 0.0
+) -> tuple[BoolArray, float]:
     """Close one body and fill it.
 
     Parameters
@@ -108,10 +110,13 @@ def close_body(body: BoolArray, *, radius: float | None, pore: float = 0.0) -> t
     body
         bool array: one particle's pixels, holes filled.
     radius
-        Closing radius in pixels; None takes an eighth of the body's own inner radius, up to three tenths where that adds less
-        than 2.5 % to the area, and closes wider mouths as well where the bay behind them is no larger than the pores inside.
+        Closing radius in pixels; None takes an eighth of the body's own inner radius, three and eight tenths where they add no
+        more than a rim as porous as the inside would, and closes wider mouths where the bay behind them is no larger than
+        the pores inside.
     pore
         Area of the largest pore inside, square pixels.
+    holes
+        Pore fraction inside, 0…1, as far as known.
 
     Returns
     -------
@@ -124,9 +129,10 @@ def close_body(body: BoolArray, *, radius: float | None, pore: float = 0.0) -> t
     used = MOUTH * inner_radius(body)
     closed = fill_holes(close_mask(body, used))
     inner = inner_radius(closed)
-    wider = fill_holes(close_mask(closed, 0.3 * inner))
-    if wider.sum() <= 1.025 * closed.sum():
-        closed, used = wider, 0.3 * inner
+    for factor, allowed in ((0.3, max(0.025, 0.1 * holes)), (0.8, 0.06 * holes)):
+        wider = fill_holes(close_mask(closed, factor * inner)) if allowed > 0 else closed
+        if wider.sum() <= (1 + allowed) * closed.sum():
+            closed, used = wider, factor * inner
     return closed | cut_pores(closed, pore=max(pore, 0.004 * float(closed.sum()))), used
 
 

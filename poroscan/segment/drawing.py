@@ -117,7 +117,8 @@ def _fine_mask(
     own = (raw & grown & ~others) | deep
     filled = _largest(ndimage.binary_opening(fill_holes(own), np.ones((3, 3))) | deep)
     pore = _largest_area(filled & ~raw) if best.name in BY_GREY else 0.0
-    closed, used = close_body(filled, radius=radius, pore=pore)
+    holes = float((filled & ~raw).sum()) / max(float(filled.sum()), 1.0) if best.name in BY_GREY else 0.0
+    closed, used = close_body(filled, radius=radius, pore=pore, holes=holes)
     closed = closed & ~others
     return closed, float((closed & ~filled).sum()) / max(float(closed.sum()), 1.0), used
 

@@ -11,6 +11,7 @@ from poroscan.section import BoolArray
 from poroscan.segment.cleanup import Float32, bands, shading
 from poroscan.segment.closing import distance_to
 from poroscan.segment.histogram import Levels, bright_share, find_levels
+from poroscan.segment.outline import half_level
 from poroscan.segment.pores import PORES, Inside, Pores, fixed, threshold_of, trained
 from poroscan.segment.result import Threshold
 from poroscan.segment.settings import SegmentSettings
@@ -67,7 +68,7 @@ def _levelled(
 ) -> tuple[Float32, float]:
     """Grey values without shading, bands and noise, and the noise left."""
     rough = ndimage.gaussian_filter(grey, 1.0)
-    surface = shading(rough, particle) if settings.flatten else np.zeros_like(grey)
+    surface = _surface(rough, particle, raw) if settings.flatten else np.zeros_like(grey)
     if settings.destripe:
         rough = rough - surface
         residual = noise / (2 * math.sqrt(math.pi))
@@ -78,6 +79,25 @@ def _levelled(
     if not settings.denoise:
         return level, noise
     return smooth_edges_kept(level, particle, weight=noise), NOISE_LEFT * noise
+
+
+def _surface(rough: Float32, particle: BoolArray, raw: BoolArray | None) -> Float32:
+    """Shading fitted to the material, if levelling by it draws material and pores further apart; else zeros."""
+    likely = particle if raw is None else ndimage.binary_erosion(raw & particle, iterations=2)
+    if int(likely.sum()) < 0.05 * int(particle.sum()):
+        likely = particle
+    surface = shading(rough, likely)
+    step = max(1, int(particle.sum()) // 20000)
+    before, by = rough[particle][::step], surface[particle][::step]
+    if _tightness(before - by) < 1.02 * _tightness(before):
+        return np.zeros_like(rough)
+    return surface
+
+
+def _tightness(values: Float32) -> float:
+    """Contrast of the two classes of grey values over their spread."""
+    level, separation = half_level(values)
+    return separation if math.isfinite(level) else 0.0
 
 
 #: Standard deviation left by smoothing with the noise as its weight, over the noise (measured on flat fields of white noise).
