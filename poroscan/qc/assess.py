@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 import pandas as pd
@@ -12,6 +13,7 @@ from poroscan.qc.acceptance import Acceptance, Plan, accept
 from poroscan.qc.capability import Capability, capability
 from poroscan.qc.estimate import Sample, counted, sample
 from poroscan.qc.limits import Outcome, Verdict, judge, overall
+from poroscan.qc.regime_check import RegimeVerdict, judge_regime
 from poroscan.qc.settings import Limit, QcSettings
 from poroscan.qc.tolerance import ToleranceInterval, tolerance_interval
 
@@ -29,16 +31,19 @@ class LimitResult:
 
 @dataclass(frozen=True, eq=False)
 class BatchAssessment:
-    """One batch against all limits; ``outcome`` is None where there are none."""
+    """One batch against all limits; ``outcome`` is None where there are none, ``regime`` where none is wanted."""
 
     batch: str
     particles: int
     images: int
     results: tuple[LimitResult, ...]
     outcome: Outcome | None
+    regime: RegimeVerdict | None = None
 
 
-def assess(particles: pd.DataFrame, settings: QcSettings) -> dict[str, BatchAssessment]:
+def assess(
+    particles: pd.DataFrame, settings: QcSettings, *, batches: Mapping[str, Mapping[str, Any]] | None = None
+) -> dict[str, BatchAssessment]:
     """Hold every batch against the limits.
 
     Parameters
@@ -47,20 +52,38 @@ def assess(particles: pd.DataFrame, settings: QcSettings) -> dict[str, BatchAsse
         Rows of particles.csv.
     settings
         Limits; checked before (``limits.check_limits``).
+    batches
+        Rows of batches.csv by name, for their regime; a batch without any particle is assessed too. None takes the
+        batches of the particles, without regime.
     """
-    return {
-        str(name): assess_batch(str(name), rows, settings)
-        for name, rows in particles.groupby("batch", sort=False, dropna=False)
-    }
+    found = {str(name): rows for name, rows in particles.groupby("batch", sort=False, dropna=False)}
+    regimes = dict.fromkeys(found, {}) if batches is None else batches
+    none = particles.iloc[:0]
+    return {name: assess_batch(name, found.get(name, none), settings, row=row) for name, row in regimes.items()}
 
 
-def assess_batch(name: str, rows: pd.DataFrame, settings: QcSettings) -> BatchAssessment:
-    """Hold one batch against the limits."""
+def assess_batch(
+    name: str, rows: pd.DataFrame, settings: QcSettings, *, row: Mapping[str, Any] | None = None
+) -> BatchAssessment:
+    """Hold one batch against the limits.
+
+    Parameters
+    ----------
+    name
+        Name of the batch.
+    rows
+        Its rows of particles.csv; none give verdicts that are not decided.
+    settings
+        Limits, regime wanted, smallest counts.
+    row
+        Its row of batches.csv, for the regime found.
+    """
     used = counted(rows)
     images = int(used["image"].nunique())
     results = tuple(_result(limit, rows, settings, images) for limit in settings.limits)
-    outcome = overall([r.verdict for r in results]) if results else None
-    return BatchAssessment(name, len(used), images, results, outcome)
+    regime = None if settings.regime is None else judge_regime(settings.regime, row or {})
+    outcomes = [r.verdict.outcome for r in results] + ([regime.outcome] if regime else [])
+    return BatchAssessment(name, len(used), images, results, overall(outcomes) if outcomes else None, regime)
 
 
 def _result(limit: Limit, rows: pd.DataFrame, settings: QcSettings, images: int) -> LimitResult:
@@ -69,17 +92,25 @@ def _result(limit: Limit, rows: pd.DataFrame, settings: QcSettings, images: int)
     return LimitResult(
         verdict,
         s,
-        tolerance=tolerance_interval(s.values, side=_side(limit)) if "tolerance_interval" in limit.also else None,
-        capability=_capability(limit, s) if "capability" in limit.also else None,
+        tolerance=_tolerance(limit, s),
+        capability=_capability(limit, s),
         acceptance=_acceptance(limit, s) if "acceptance_by_variables" in limit.also else None,
     )
+
+
+def _tolerance(limit: Limit, s: Sample) -> ToleranceInterval | None:
+    if "tolerance_interval" not in limit.also or s.values.size < 2:
+        return None
+    return tolerance_interval(s.values, side=_side(limit))
 
 
 def _side(limit: Limit) -> str:
     return "both" if limit.low is not None and limit.high is not None else "low" if limit.high is None else "high"
 
 
-def _capability(limit: Limit, s: Sample) -> Capability:
+def _capability(limit: Limit, s: Sample) -> Capability | None:
+    if "capability" not in limit.also or s.values.size < 2 or not np.ptp(s.values) > 0:
+        return None
     return capability(s.values, low=limit.low, high=limit.high, target=limit.target)
 
 

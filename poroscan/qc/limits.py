@@ -21,6 +21,7 @@ from scipy import stats
 
 from poroscan.errors import SettingsError
 from poroscan.qc.comparison import BatchMean
+from poroscan.qc.interval import bounds_of, mean_interval
 from poroscan.qc.sample_size import clopper_pearson_interval
 from poroscan.qc.settings import Limit, QcSettings
 from poroscan.quantities import Quantity, by_key
@@ -120,7 +121,7 @@ def judge(limit: Limit, values: npt.ArrayLike, estimate: BatchMean, settings: Qc
     return _decide(limit, value, low, high, int(x.size))
 
 
-def overall(verdicts: Sequence[Verdict]) -> Outcome:
+def overall(outcomes: Sequence[Outcome]) -> Outcome:
     """Verdict of a batch: outside where any limit is, else not decided where any is not, else within.
 
     Raises
@@ -128,9 +129,8 @@ def overall(verdicts: Sequence[Verdict]) -> Outcome:
     ValueError
         If there is no verdict: a batch without limits has none.
     """
-    if not verdicts:
+    if not outcomes:
         raise ValueError("a batch without limits has no verdict")
-    outcomes = {v.outcome for v in verdicts}
     return "outside" if "outside" in outcomes else "not_decided" if "not_decided" in outcomes else "within"
 
 
@@ -163,11 +163,8 @@ def _bounds(limit: Limit) -> tuple[float, float]:
     return (-math.inf if limit.low is None else limit.low), (math.inf if limit.high is None else limit.high)
 
 
-def _mean(_limit: Limit, _x: FloatArray, estimate: BatchMean, level: float) -> tuple[float, float, float]:
-    if not (estimate.df > 0 and math.isfinite(estimate.standard_error)):
-        return estimate.mean, math.nan, math.nan
-    half = float(stats.t.ppf((1 + level) / 2, estimate.df)) * estimate.standard_error
-    return estimate.mean, estimate.mean - half, estimate.mean + half
+def _mean(limit: Limit, _x: FloatArray, estimate: BatchMean, level: float) -> tuple[float, float, float]:
+    return estimate.mean, *mean_interval(estimate, level=level, bounds=bounds_of(limit.quantity))
 
 
 def _percentile(limit: Limit, x: FloatArray, estimate: BatchMean, level: float) -> tuple[float, float, float]:

@@ -3,8 +3,9 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Mapping
 from dataclasses import dataclass
-from typing import Literal
+from typing import Any, Literal
 
 On = Literal["mean", "percentile", "share_outside"]
 Extra = Literal["tolerance_interval", "capability", "acceptance_by_variables"]
@@ -105,3 +106,16 @@ class QcSettings:
             raise ValueError("qc: min_particles and min_images must be at least 1")
         if not 0.5 <= self.level < 1:
             raise ValueError(f"qc: level must lie between 0.5 and 1, not {self.level!r}")
+
+
+def settings_of(plain: Mapping[str, Any]) -> QcSettings:
+    """Settings from plain values as run.json holds them.
+
+    Parameters
+    ----------
+    plain
+        Table ``[qc]`` of a recipe that was checked before; empty gives the defaults.
+    """
+    limits = tuple(Limit(**(dict(entry) | {"also": tuple(entry.get("also", ()))})) for entry in plain.get("limits", ()))
+    rest = {key: tuple(v) if isinstance(v, list) else v for key, v in plain.items() if key != "limits"}
+    return QcSettings(limits=limits, **rest)

@@ -95,7 +95,7 @@ def test_particles_of_one_picture_count_less() -> None:
 
 def test_overall() -> None:
     x = np.array([0.50, 0.52, 0.54, 0.56, 0.58])
-    within, outside, open_ = (_judge(Limit("porosity", low=v), x) for v in (0.4, 0.6, 0.54))
+    within, outside, open_ = (_judge(Limit("porosity", low=v), x).outcome for v in (0.4, 0.6, 0.54))
     assert overall([within, within]) == "within"
     assert overall([within, open_]) == "not_decided"
     assert overall([within, open_, outside]) == "outside"
