@@ -64,6 +64,13 @@ def test_touching_discs_part_at_a_narrow_neck(distance: int, bodies: int) -> Non
     assert body_diameters(mask, pixel_size=1.0, split_depth=1.0).size == pieces(mask, diagonal=True)[1]
 
 
+@pytest.mark.parametrize(("distance", "bodies"), [(33, 1), (38, 2)])
+def test_the_smaller_of_two_unlike_discs_decides(distance: int, bodies: int) -> None:
+    # Radii 30 and 10, half-necks 9.0 and 5.3: parted below 0.75 · 10, whatever the size of the larger one.
+    mask = discs([(40, 40), (40, 40 + distance)], [30.0, 10.0], (81, 101))
+    assert body_diameters(mask, pixel_size=1.0).size == bodies
+
+
 def test_split_halves_are_equal() -> None:
     d = body_diameters(discs([(30, 30), (30, 66)], [20.0, 20.0], (61, 101)), pixel_size=0.5)
     assert d[0] == pytest.approx(d[1], rel=0.02)
