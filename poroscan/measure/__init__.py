@@ -106,7 +106,21 @@ def measure_section(
     *,
     rng: np.random.Generator | int | None = None,
 ) -> Measurement:
-    """Measure every quantity of the catalogue on one section."""
+    """Measure every quantity of the catalogue on one section.
+
+    Parameters
+    ----------
+    section
+        The section; a volume (3-D) gives the quantities that a volume has.
+    settings
+        What a user can choose; None takes the defaults.
+    rng
+        Seed or generator of the bootstrap intervals (``numpy.random.default_rng``); the same seed gives the same result.
+
+    Returns
+    -------
+    Measurement, in pixels; what the view or the dimension cannot give is NaN, and a flag says why.
+    """
     settings = settings or MeasureSettings()
     generator = np.random.default_rng(rng)
     shared = Shared(section, settings)
