@@ -93,8 +93,8 @@ def crop_to_particle(field: npt.NDArray[np.floating], threshold: float) -> npt.N
     return np.ascontiguousarray(field[tuple(window)], dtype=np.float32)
 
 
-def save_run(path: str | Path, run: AtlasRun) -> None:
-    """Write a run; the file appears whole or not at all.
+def run_to_bytes(run: AtlasRun) -> bytes:
+    """Content of the file of a run; equal runs give equal bytes.
 
     Raises
     ------
@@ -117,10 +117,22 @@ def save_run(path: str | Path, run: AtlasRun) -> None:
         "path": np.asarray(run.path, dtype=np.float32),
         "demixings": np.asarray(run.demixings, dtype=np.float32),
     }
+    return _pack(arrays)
+
+
+def save_run(path: str | Path, run: AtlasRun) -> None:
+    """Write a run; the file appears whole or not at all.
+
+    Raises
+    ------
+    ValueError
+        If the field holds a value that is not finite.
+    """
+    data = run_to_bytes(run)
     target = Path(path)
     temporary = target.with_name(f".{target.name}.{os.getpid()}.tmp")
     try:
-        temporary.write_bytes(_pack(arrays))
+        temporary.write_bytes(data)
         os.replace(temporary, target)
     finally:
         temporary.unlink(missing_ok=True)

@@ -46,16 +46,16 @@ class Axis:
 
 
 AXES: tuple[Axis, ...] = (
-    Axis("polymer", "polymer fraction of the dope", 0.10, 0.36),
-    Axis("chi_pn", "χ polymer–non-solvent", 1.0, 2.6),
-    Axis("chi_ps", "χ polymer–solvent", 0.1, 0.6),
-    Axis("chi_sn", "χ solvent–non-solvent", -0.4, 2.4),
+    Axis("polymer", "polymer fraction of the dope", 0.06, 0.46),
+    Axis("chi_pn", "χ polymer–non-solvent", 1.7, 3.0),
+    Axis("chi_ps", "χ polymer–solvent", 0.1, 0.5),
+    Axis("chi_sn", "χ solvent–non-solvent", -0.2, 1.8),
     Axis("chain_length", "chain length of the polymer", 8.0, 40.0, logarithmic=True),
-    Axis("bath_solvent", "solvent fraction of the bath", 0.0, 0.55),
-    Axis("polymer_mobility", "mobility of the polymer", 0.04, 0.4, logarithmic=True),
-    Axis("arrest_fraction", "polymer fraction of arrest", 0.55, 0.8),
-    Axis("noise", "strength of the thermal noise", 0.004, 0.02, logarithmic=True),
-    Axis("kappa", "gradient energy", 0.5, 1.2),
+    Axis("bath_solvent", "solvent fraction of the bath", 0.0, 0.3),
+    Axis("polymer_mobility", "mobility of the polymer", 0.08, 0.4, logarithmic=True),
+    Axis("arrest_fraction", "polymer fraction of arrest", 0.6, 0.8),
+    Axis("noise", "strength of the thermal noise", 0.005, 0.02, logarithmic=True),
+    Axis("kappa", "gradient energy", 0.55, 1.2),
 )
 NAMES: tuple[str, ...] = tuple(axis.name for axis in AXES)
 

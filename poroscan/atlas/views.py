@@ -15,20 +15,31 @@ import numpy as np
 import numpy.typing as npt
 from scipy import ndimage
 
-from poroscan.intake.field_sections import section_of_array
-from poroscan.measure import measure_section
+from poroscan.intake.field_sections import midway, section_of_array
+from poroscan.measure import MeasureSettings, measure_section
 from poroscan.measure.descriptors import descriptors
 from poroscan.render import RenderSettings, render_section
 from poroscan.render.settings import look
 from poroscan.section import UNKNOWN_PIXEL_SIZE, BoolArray, Picture, Section
-from poroscan.segment import segment_picture
+from poroscan.segment import SegmentSettings, segment_picture
 
-#: Closing of the outline over the particle's diameter: bridges the gaps between the beads at the surface of a bead structure.
-CLOSING = 0.06
+#: Closings of the outline over the particle's extent, the first of which joins nearly all polymer to one body is taken: the gaps
+#: between the beads at the surface of a bead structure are wider than the mouths of open pores.
+CLOSINGS = (0.025, 0.035, 0.05, 0.07, 0.1)
+#: Share of the polymer that the particle must hold.
+_JOINED = 0.97
 #: Looks that a picture of the atlas may have, with their chances.
 _LOOKS: Mapping[str, float] = {
     "secondary": 0.4, "backscatter": 0.2, "resin": 0.1, "ion_polished": 0.15, "textured": 0.1, "charging": 0.05,
 }  # fmt: skip
+
+#: Least and largest diameter of the particle in a rendered picture, px: descriptors carry no length, so that it only sets how well
+#: pores are resolved.
+DIAMETERS = (200.0, 440.0)
+#: Chance that the segmentation is told what the picture shows (view, dark pores), as a careful user does, rather than left to itself.
+_TOLD = 0.5
+#: Descriptors need no intervals: as few resamples as are allowed.
+_MEASURE = MeasureSettings(bootstrap_replicates=20)
 
 ViewKind = Literal["whole", "interior"]
 
@@ -58,8 +69,8 @@ class Described:
 def masks(field: npt.NDArray[np.floating], *, scale: float = 1.0) -> tuple[BoolArray, BoolArray]:
     """Pores and particle of a two-dimensional field of polymer fractions, finer by ``scale``.
 
-    Polymer is where the fraction exceeds half-way between the bath (the border of the field) and the polymer-rich phase (its
-    95th percentile inside), after a Gaussian of one cell that takes out the thermal noise.
+    Polymer is where the fraction exceeds half-way between the means of the two phases (``midway``), after a Gaussian of one
+    cell that takes out the thermal noise. A core that never demixed counts as polymer, however dilute beside the skin.
 
     Raises
     ------
@@ -69,19 +80,29 @@ def masks(field: npt.NDArray[np.floating], *, scale: float = 1.0) -> tuple[BoolA
     if field.ndim != 2:
         raise ValueError(f"field must be two-dimensional (cut a volume first), not {field.ndim}-D")
     smooth = ndimage.gaussian_filter(np.asarray(field, dtype=np.float32), 1.0, mode="nearest")
-    border = np.concatenate([smooth[0], smooth[-1], smooth[:, 0], smooth[:, -1]])
-    bath = float(np.median(border))
-    rich = float(np.quantile(smooth[smooth > bath + 0.25 * (smooth.max() - bath)], 0.95))
-    fine = ndimage.zoom(smooth, scale, order=1, mode="nearest", grid_mode=True) if scale != 1 else smooth
-    diameter = np.sqrt(4 / np.pi * np.count_nonzero(fine > (bath + rich) / 2))
-    section = section_of_array(
-        fine,
-        pixel_size=UNKNOWN_PIXEL_SIZE,
-        threshold=(bath + rich) / 2,
-        closing_px=max(2.0, CLOSING * diameter),
-        view="whole",
-    )
+    level = midway(smooth)
+    closing = _closing(smooth, level)
+    if scale != 1:
+        smooth = ndimage.zoom(smooth, scale, order=1, mode="nearest", grid_mode=True)
+    section = _outlined(smooth, level, closing * scale)
     return section.pores, section.particle
+
+
+def _outlined(field: npt.NDArray[np.float32], level: float, closing: float) -> Section:
+    return section_of_array(
+        field, pixel_size=UNKNOWN_PIXEL_SIZE, threshold=level, closing_px=max(closing, 2.0), view="whole"
+    )
+
+
+def _closing(field: npt.NDArray[np.float32], level: float) -> float:
+    """Least closing radius (cells) that joins nearly all polymer to one body."""
+    polymer = field >= level
+    extent = max(int(np.ptp(np.flatnonzero(polymer.any(axis=axis)))) + 1 for axis in (0, 1))
+    for share in CLOSINGS:
+        held = np.count_nonzero(_outlined(field, level, share * extent).particle & polymer)
+        if held >= _JOINED * np.count_nonzero(polymer):
+            break
+    return share * extent
 
 
 def clean_section(field: npt.NDArray[np.floating]) -> Section:
@@ -130,27 +151,37 @@ def describe_rendered(
 ) -> Described | None:
     """Descriptors after rendering and segmentation; None where the segmentation found no particle."""
     picture, name = picture_of(field, kind=kind, diameter_px=diameter_px, rng=rng)
-    sections = segment_picture(picture).sections
+    told = SegmentSettings(view=kind, pore_shade="dark") if rng.random() < _TOLD else SegmentSettings()
+    sections = segment_picture(picture, told).sections
     if not sections:
         return None
     largest = max(sections, key=lambda s: int(np.count_nonzero(s.particle)))
+    if not _is_the_particle(largest, kind, diameter_px):
+        return None
     return Described(kind, name, diameter_px, _values(largest))
 
 
+def _is_the_particle(section: Section, kind: ViewKind, diameter_px: float) -> bool:
+    """Whether the segmentation found the particle, and not a bead of it: the match can learn nothing from a wrong outline."""
+    if kind == "interior":
+        return section.view == "interior"
+    return section.view == "whole" and int(np.count_nonzero(section.particle)) > 0.5 * np.pi / 4 * diameter_px**2
+
+
 def describe_all(field: npt.NDArray[np.floating], *, wholes: int, interiors: int, seed: int) -> Iterator[Described]:
-    """Clean descriptors, then those of several rendered views at diameters between 260 and 620 px."""
+    """Clean descriptors, then those of several rendered views at the diameters of ``DIAMETERS``."""
     yield describe_clean(field)
     rng = np.random.default_rng(seed)
     for i in range(wholes + interiors):
         kind: ViewKind = "whole" if i < wholes else "interior"
-        diameter = float(np.exp(rng.uniform(np.log(260), np.log(620))))
+        diameter = float(np.exp(rng.uniform(*np.log(DIAMETERS))))
         made = describe_rendered(field, kind=kind, diameter_px=diameter, rng=rng)
         if made is not None:
             yield made
 
 
 def _values(section: Section) -> Mapping[str, float]:
-    measurement = measure_section(section, rng=0)
+    measurement = measure_section(section, _MEASURE, rng=0)
     return descriptors(measurement.record, measurement.curves)
 
 
