@@ -18,7 +18,8 @@ from poroscan.batch.scan import scan_folder
 from poroscan.errors import SettingsError, StoreError
 
 TABLES = ("particles.csv", "particles.parquet", "pores.parquet", "curves.parquet", "batches.csv", "run.json")
-RECIPE = make_recipe({"intake": {"pixel_size_um": 0.5}})
+SETTINGS = {"intake": {"pixel_size_um": 0.5}, "measure": {"bootstrap_replicates": 20}}  # quick
+RECIPE = make_recipe(SETTINGS)
 
 
 def tables(run: Path) -> dict[str, bytes]:
@@ -100,7 +101,7 @@ def test_run_json_holds_one_line_per_input(folder: Path, tmp_path: Path) -> None
 def test_another_recipe_is_refused_until_fresh_is_asked_for(folder: Path, tmp_path: Path) -> None:
     scan_folder(folder, tmp_path / "run", RECIPE)
     before = tables(tmp_path / "run")
-    other = make_recipe({"seed": 1, "intake": {"pixel_size_um": 0.5}})
+    other = make_recipe({"seed": 1} | SETTINGS)
     with pytest.raises(SettingsError, match=r"begun with another recipe \(seed: 0 -> 1\).*--fresh"):
         scan_folder(folder, tmp_path / "run", other)
     assert tables(tmp_path / "run") == before
