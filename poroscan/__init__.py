@@ -42,6 +42,8 @@ _PUBLIC = {
     "load_formulation": "poroscan.demix.formulation",
     "Mixture": "poroscan.demix.mixture",
     "find_phase_diagram": "poroscan.demix.phase_diagram",
+    "SimulationSettings": "poroscan.demix.simulation_settings",
+    "simulate": "poroscan.demix.particle",
     "RenderSettings": "poroscan.render.settings",
     "render_section": "poroscan.render.sem",
 }
