@@ -306,6 +306,7 @@ FLAGS: Mapping[str, Flag] = MappingProxyType(
         ),
         # regime
         "no_atlas": Flag("no regime: no atlas of simulated particles is available", "install or build an atlas"),
+        "no_regime": Flag("no regime: the section has no porosity to compare", "check the outline on the overlay"),
         "unlike_atlas": Flag("unlike any simulated particle of the atlas", "do not use the regime"),
         # batch
         "failed": Flag("the picture could not be measured", "see run.json for the reason"),
