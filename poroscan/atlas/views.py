@@ -18,7 +18,8 @@ from scipy import ndimage
 from poroscan.intake.field_sections import midway, section_of_array
 from poroscan.measure import MeasureSettings, measure_section
 from poroscan.measure.descriptors import descriptors
-from poroscan.render import RenderSettings, render_section
+from poroscan.render import RenderSettings
+from poroscan.render.sem import render_section
 from poroscan.render.settings import look
 from poroscan.section import UNKNOWN_PIXEL_SIZE, BoolArray, Picture, Section
 from poroscan.segment import SegmentSettings, segment_picture
