@@ -14,7 +14,7 @@ render       SEM-like pictures with known truth
 qc           limits, statistics, charts, comparison
 report       the report page
 batch        from a folder to a run
-review, cli  looking, correcting, commands
+cli          the commands
 
 Importing the package is cheap: names are loaded when first used.
 """

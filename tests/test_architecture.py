@@ -27,8 +27,7 @@ ALLOWED = {
     "report": _BASE | {"intake", "segment", "measure", "atlas", "qc", "demix"},
     "batch": _BASE | {"intake", "segment", "measure", "atlas", "qc", "report"},
 }
-ALLOWED["review"] = ALLOWED["batch"] | {"batch"}
-ALLOWED["cli"] = ALLOWED["review"] | {"review", "demix", "render"}
+ALLOWED["cli"] = ALLOWED["batch"] | {"batch", "demix", "render"}
 
 
 def _room(path: Path) -> str:
