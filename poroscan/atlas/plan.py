@@ -1,8 +1,8 @@
 """Which formulations to simulate next: space-filling first, then where regimes and their borders are thinly covered.
 
-The first round fills the space evenly. Each later one draws formulations for the regimes that still lack runs, with a chance
-that grows with the nearest neighbours' share of that regime, so that both its middle and its borders are covered. Everything follows from the seed and the runs made so far: an interrupted build goes on as if it had not
-stopped.
+The first round fills the space evenly. Each later one draws formulations for the regimes that still lack runs, by a regression of
+the regime on the formulation: most where the regime is likely, some where it is as likely as not. Everything follows from the
+seed and the runs made so far: an interrupted build goes on as if it had not stopped.
 """
 
 from __future__ import annotations
@@ -14,13 +14,17 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
+from poroscan.atlas.calibration import softmax
+from poroscan.atlas.model import logistic
 from poroscan.atlas.space import AXES, Space, shares_of, sobol
 from poroscan.demix.regime import REGIMES
 
 FloatArray = npt.NDArray[np.float64]
 
-_NEIGHBOURS = 10
 _CANDIDATES = 4096
+_PENALTY = 1e-3
+#: Share of the picks at the borders of a regime, where its chance is near one half, instead of in its middle.
+_AT_BORDER = 0.3
 #: Candidates nearer to a chosen point than this (in shares of the ranges) are passed over.
 _APART = 0.12
 
@@ -51,7 +55,7 @@ def propose(space: Space, runs: Sequence[Known], *, n: int, per_regime: int, see
     n
         Formulations wanted.
     per_regime
-        Runs wanted of each regime; where none lacks any, points are drawn at the borders of all.
+        Runs wanted of each regime; where none lacks any, points are drawn for all alike.
     seed
         Seed of this round.
 
@@ -68,12 +72,13 @@ def propose(space: Space, runs: Sequence[Known], *, n: int, per_regime: int, see
     missing = deficits(runs, per_regime=per_regime)
     want = np.array([missing[r] for r in REGIMES], dtype=float)
     if want.sum() == 0:
-        chance = chance * (1 - chance)  # borders: most uncertain where shares are balanced
         want = np.ones(len(REGIMES))
     chosen: list[int] = []
     free = np.ones(len(candidates), dtype=bool)
     for regime in rng.choice(len(REGIMES), size=n, p=want / want.sum()):
-        weight = np.where(free, chance[:, regime] ** 2, 0.0)
+        mine = chance[:, regime]
+        mine = mine * (1 - mine) if rng.random() < _AT_BORDER else mine**2
+        weight = np.where(free, mine, 0.0)
         weight = weight if weight.sum() > 0 else free.astype(float)
         pick = int(rng.choice(len(candidates), p=weight / weight.sum()))
         chosen.append(pick)
@@ -85,13 +90,16 @@ def propose(space: Space, runs: Sequence[Known], *, n: int, per_regime: int, see
 
 
 def _regime_chances(points: FloatArray, known: Sequence[Known]) -> FloatArray:
-    """Share of each regime among the nearest neighbours, shape (points, regimes)."""
-    from scipy.spatial import cKDTree
-
+    """Chance of each regime at points, shape (points, regimes), by logistic regression on squares and products of the axes."""
+    outcomes = (*REGIMES, *sorted({k.outcome for k in known} - set(REGIMES)))
     where = np.array([shares_of(k.parameters) for k in known])
-    labels = np.array([[k.outcome == r for r in REGIMES] for k in known], dtype=float)
-    k = min(_NEIGHBOURS, len(known))
-    distance, index = cKDTree(where).query(points, k=k)
-    distance, index = distance.reshape(len(points), k), index.reshape(len(points), k)
-    weight = 1 / (distance + 0.05)
-    return np.einsum("pk,pkr->pr", weight, labels[index]) / weight.sum(axis=1, keepdims=True)
+    label = np.array([outcomes.index(k.outcome) for k in known], dtype=np.intp)
+    weight = np.ones(len(known))
+    fitted = logistic(_quadratic(where), label, weight, classes=len(outcomes), penalty=_PENALTY)
+    return softmax(_quadratic(points) @ fitted)[:, : len(REGIMES)]
+
+
+def _quadratic(shares: FloatArray) -> FloatArray:
+    x = 2 * shares - 1
+    first, second = np.triu_indices(x.shape[1])
+    return np.concatenate([np.ones((len(x), 1)), x, x[:, first] * x[:, second]], axis=1)
