@@ -16,6 +16,7 @@ import numpy as np
 import numpy.typing as npt
 
 from poroscan import __version__
+from poroscan.atlas.admission import outcome_of
 from poroscan.atlas.plan import Known, deficits, propose
 from poroscan.atlas.run_file import AtlasRun, crop_to_particle, load_run, save_run
 from poroscan.atlas.space import Space, formulation_at
@@ -131,7 +132,7 @@ def build(
 
 
 def _is_complete(known: Sequence[Known], plan: BuildPlan) -> bool:
-    kept = [k for k in known if k.outcome not in (DISSOLVED, FAILED)]
+    kept = [k for k in known if k.outcome in REGIMES]
     return len(kept) >= plan.total and not any(deficits(kept, per_regime=plan.per_regime).values())
 
 
@@ -193,8 +194,9 @@ def run_job(root: str, job: Job) -> str:
     if not _kept(result, job):
         _write_json(_refusal(Path(root), job.name), {"outcome": DISSOLVED, "parameters": job.parameters})
         return DISSOLVED
-    save_run(_target(Path(root), job.name), _as_run(job, result))
-    return result.regime
+    run = _as_run(job, result)
+    save_run(_target(Path(root), job.name), run)
+    return outcome_of(run)
 
 
 def _kept(result: SimulationResult, job: Job) -> bool:
@@ -231,7 +233,7 @@ def _plain(values: Mapping[str, Any]) -> Iterator[tuple[str, Any]]:
 def _finished(root: Path) -> Iterator[Known]:
     for path in sorted((root / "runs").glob("r*.npz")):
         run = load_run(path)
-        yield Known(run.parameters, run.regime)
+        yield Known(run.parameters, outcome_of(run))
     for path in sorted((root / "runs").glob("r*.json")):
         entry = json.loads(path.read_text())
         yield Known(entry["parameters"], entry["outcome"])

@@ -7,6 +7,7 @@ from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
+from poroscan.atlas.admission import SLOW, outcome_of
 from poroscan.atlas.describe import view_rows
 from poroscan.atlas.run_file import AtlasRun, load_run, run_to_bytes
 from poroscan.atlas.space import NAMES
@@ -43,6 +44,8 @@ def collect(folder: str | Path, builds: Mapping[str, str | Path], *, about: Mapp
             if not views:
                 continue
             run = relabelled(load_run(path))
+            if outcome_of(run) == SLOW:
+                continue
             run = replace(run, name=f"{group}-{run.name}")
             rows += [(len(entries), row) for row in views]
             entries.append((group, run))

@@ -16,6 +16,7 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
+from poroscan.atlas.admission import SLOW, outcome_of
 from poroscan.atlas.run_file import AtlasRun, load_run
 from poroscan.atlas.views import describe_all
 
@@ -110,7 +111,8 @@ def cuts_of(field: npt.NDArray[np.float32]) -> Iterator[tuple[float, npt.NDArray
 
 
 def _describe_file(source: str, target: str, plan: ViewPlan) -> None:
-    rows = list(describe_run(load_run(source), plan))
+    run = load_run(source)
+    rows = [] if outcome_of(run) == SLOW else list(describe_run(run, plan))
     path = Path(target)
     temporary = path.with_name(f".{path.name}.{os.getpid()}.tmp")
     temporary.write_text(json.dumps(rows))

@@ -24,7 +24,7 @@ FloatArray = npt.NDArray[np.float64]
 _CANDIDATES = 4096
 _PENALTY = 1e-3
 #: Share of the picks at the borders of a regime, where its chance is near one half, instead of in its middle.
-_AT_BORDER = 0.3
+_AT_BORDER = 0.15
 #: Candidates nearer to a chosen point than this (in shares of the ranges) are passed over.
 _APART = 0.12
 

@@ -46,8 +46,8 @@ class Axis:
 
 
 AXES: tuple[Axis, ...] = (
-    Axis("polymer", "polymer fraction of the dope", 0.06, 0.46),
-    Axis("chi_pn", "χ polymer–non-solvent", 1.7, 3.0),
+    Axis("polymer", "polymer fraction of the dope", 0.06, 0.48),
+    Axis("chi_pn", "χ polymer–non-solvent", 2.1, 3.0),
     Axis("chi_ps", "χ polymer–solvent", 0.1, 0.5),
     Axis("chi_sn", "χ solvent–non-solvent", -0.2, 1.8),
     Axis("chain_length", "chain length of the polymer", 8.0, 40.0, logarithmic=True),
