@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
+import dataclasses
 from collections.abc import Mapping
-from dataclasses import replace
 from pathlib import Path
 from typing import Any
 
@@ -18,7 +18,13 @@ from poroscan.demix.regime import read_regime
 from poroscan.errors import StoreError
 
 
-def collect(folder: str | Path, builds: Mapping[str, str | Path], *, about: Mapping[str, Any] | None = None) -> Atlas:
+def collect(
+    folder: str | Path,
+    builds: Mapping[str, str | Path],
+    *,
+    about: Mapping[str, Any] | None = None,
+    replace: bool = False,
+) -> Atlas:
     """Write an atlas of every described run of several build folders.
 
     Parameters
@@ -29,6 +35,8 @@ def collect(folder: str | Path, builds: Mapping[str, str | Path], *, about: Mapp
         Set (``flat``, ``fine``, ``solid``, ``own``) -> build folder.
     about
         Kept in ``atlas.json``.
+    replace
+        Whether an atlas in the folder is replaced.
 
     Raises
     ------
@@ -46,13 +54,15 @@ def collect(folder: str | Path, builds: Mapping[str, str | Path], *, about: Mapp
             run = relabelled(load_run(path))
             if outcome_of(run) == SLOW:
                 continue
-            run = replace(run, name=f"{group}-{run.name}")
+            run = dataclasses.replace(run, name=f"{group}-{run.name}")
             rows += [(len(entries), row) for row in views]
             entries.append((group, run))
             fields.setdefault(group, []).append((run.name, run_to_bytes(run)))
     if not entries:
         raise StoreError(f"{folder}: no run of the build folders is described yet; nothing to collect")
-    return write_atlas(folder, run_table(entries, NAMES), view_table(rows), fields=fields, about=about or {})
+    return write_atlas(
+        folder, run_table(entries, NAMES), view_table(rows), fields=fields, about=about or {}, replace=replace
+    )
 
 
 def relabelled(run: AtlasRun) -> AtlasRun:
@@ -61,4 +71,4 @@ def relabelled(run: AtlasRun) -> AtlasRun:
         return run
     path = [PathRow(*map(float, row)) for row in run.path]
     found = [FirstDemixing(*map(float, row)) for row in run.demixings]
-    return replace(run, regime=read_regime(path, found, dimensions=run.field.ndim).regime)
+    return dataclasses.replace(run, regime=read_regime(path, found, dimensions=run.field.ndim).regime)

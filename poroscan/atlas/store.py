@@ -144,6 +144,7 @@ def write_atlas(
     *,
     fields: Mapping[str, Sequence[tuple[str, bytes]]],
     about: Mapping[str, Any],
+    replace: bool = False,
 ) -> Atlas:
     """Write an atlas; ``atlas.json`` comes last, so that a broken write is never taken for an atlas.
 
@@ -157,6 +158,8 @@ def write_atlas(
         Set -> name and content of each run file.
     about
         Kept in ``atlas.json``.
+    replace
+        Whether an atlas in the folder is replaced (a build that goes on).
 
     Raises
     ------
@@ -164,7 +167,7 @@ def write_atlas(
         If the folder holds an atlas already.
     """
     root = Path(folder)
-    if (root / "atlas.json").exists():
+    if (root / "atlas.json").exists() and not replace:
         raise StoreError(f"{root}: holds an atlas already; name another folder (nothing was overwritten)")
     root.mkdir(parents=True, exist_ok=True)
     files = {_RUNS: runs_to_bytes(runs), _VIEWS: views_to_bytes(views)}

@@ -47,6 +47,8 @@ COMMANDS: tuple[str, ...] = (
     "phases",
     "simulate",
     "score",
+    "match",
+    "atlas",
 )
 
 for _name in COMMANDS:
