@@ -7,6 +7,7 @@ share of its own grey in the pixels around them.
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -147,7 +148,7 @@ def _is_drawn(values: npt.NDArray[np.float32], bar: ScaleBar) -> bool:
 
 
 def _bars(values: npt.NDArray[np.float32], ink: npt.NDArray[np.bool_], shape: tuple[int, ...]) -> list[ScaleBar]:
-    strokes = [s for s in _strokes(ink) if _free(ink, s)]
+    strokes = _free(ink, _strokes(ink))
     whole = [s for s in strokes if s.width >= max(15, _LEAST_LENGTH * shape[1]) and not _is_rule(ink, s)]
     whole = [s for s in whole if not _in_frame(ink, s, strokes) and not _is_letter(ink, s)]
     bars = [_measured(values, ink, s) for s in whole]
@@ -158,39 +159,55 @@ def _bars(values: npt.NDArray[np.float32], ink: npt.NDArray[np.bool_], shape: tu
 
 def _strokes(ink: npt.NDArray[np.bool_]) -> list[Box]:
     """Rectangles of ink: runs of one row after the other with the same ends to two pixels."""
-    least = max(8, int(0.008 * ink.shape[1]))
-    padded = np.zeros((ink.shape[0], ink.shape[1] + 2), np.int8)
-    padded[:, 1:-1] = ink
-    steps = np.diff(padded, axis=1)
-    rows, starts = np.nonzero(steps == 1)
-    ends = np.nonzero(steps == -1)[1]
-    long = ends - starts >= least
-    open_: list[list[int]] = []
-    done: list[list[int]] = []
-    for row, start, end in zip(rows[long].tolist(), starts[long].tolist(), ends[long].tolist(), strict=True):
-        still: list[list[int]] = []
-        for stroke in open_:
-            (still if stroke[1] >= row - 1 else done).append(stroke)
-        open_ = still
-        for stroke in open_:
-            if stroke[1] == row - 1 and abs(stroke[2] - start) <= 2 and abs(stroke[3] - end) <= 2:
-                stroke[1] = row
+    boxes = []
+    before: dict[int, list[int]] = {}  # strokes that reach the row above, by their left end
+    now: dict[int, list[int]] = {}
+    current = -1
+    for row, start, end in _runs(ink, least=max(8, int(0.008 * ink.shape[1]))):
+        if row != current:
+            before, now, current = now if row == current + 1 else {}, {}, row
+        # Runs of a row are more than eight columns apart, so that at most one stroke is near.
+        for left in range(start - 2, start + 3):
+            if left in before and -2 <= before[left][3] - end <= 2:
+                now[left] = before[left]
+                now[left][1] = row + 1
                 break
         else:
-            open_.append([row, row, start, end])
-    boxes = [Box(t, b + 1, s, e) for t, b, s, e in done + open_]
-    return [b for b in boxes if b.height <= max(2, _MOST_THICKNESS * b.width)]
+            now[start] = [row, row + 1, start, end]
+            boxes.append(now[start])
+    found = [Box(*b) for b in boxes]
+    return [b for b in found if b.height <= max(2, _MOST_THICKNESS * b.width)]
 
 
-def _free(ink: npt.NDArray[np.bool_], s: Box) -> bool:
-    """Background above and below, apart from ticks; not touching the picture's sides."""
-    if s.left == 0 or s.right == ink.shape[1]:
-        return False
-    inner = slice(s.left + 1, s.right - 1)
-    for row in (s.top - 2, s.bottom + 1):
-        if 0 <= row < ink.shape[0] and float(ink[row, inner].mean()) > 0.35:
-            return False
-    return True
+def _runs(ink: npt.NDArray[np.bool_], *, least: int) -> Iterator[tuple[int, int, int]]:
+    """Row, first column and column after the last of every horizontal run of at least so many pixels, in reading order."""
+    padded = np.zeros((ink.shape[0], ink.shape[1] + 1), dtype=bool)
+    padded[:, :-1] = ink
+    flat = padded.ravel()  # the column of background keeps the rows apart
+    changes = np.flatnonzero(flat[1:] != flat[:-1]) + 1
+    if flat.size and flat[0]:
+        changes = np.concatenate([[0], changes])
+    starts, ends = changes[::2], changes[1::2]
+    long = ends - starts >= least
+    rows, columns = np.divmod(starts[long], padded.shape[1])
+    return zip(rows.tolist(), columns.tolist(), (columns + (ends - starts)[long]).tolist(), strict=True)
+
+
+def _free(ink: npt.NDArray[np.bool_], strokes: list[Box]) -> list[Box]:
+    """Those with background above and below, apart from ticks, that do not touch the picture's sides."""
+    rows, columns = ink.shape
+    inner = [s for s in strokes if s.left > 0 and s.right < columns]
+    if not inner:
+        return []
+    sums = np.zeros((rows, columns + 1), dtype=np.int32)
+    np.cumsum(ink, axis=1, out=sums[:, 1:])
+    top, bottom, left, right = np.array([(s.top, s.bottom, s.left, s.right) for s in inner]).T
+    free = np.ones(len(inner), dtype=bool)
+    for row in (top - 2, bottom + 1):
+        near = np.clip(row, 0, rows - 1)
+        share = (sums[near, right - 1] - sums[near, left + 1]) / np.maximum(right - left - 2, 1)
+        free &= (row != near) | (share <= 0.35)
+    return [s for s, kept in zip(inner, free.tolist(), strict=True) if kept]
 
 
 def _reach(ink: npt.NDArray[np.bool_], s: Box, column: int) -> int:

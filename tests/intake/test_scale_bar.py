@@ -16,7 +16,7 @@ from poroscan.errors import MissingExtraError
 from poroscan.intake import IntakeSettings, SidecarRow, load_picture, ocr
 from poroscan.intake.banner import find_banner
 from poroscan.intake.bar_reading import read_scale_bar
-from poroscan.intake.scale_bar import find_scale_bars
+from poroscan.intake.scale_bar import _free, _strokes, find_scale_bars
 from poroscan.intake.scale_label import parse_label, plausible
 
 needs_ocr = pytest.mark.skipif(importlib.util.find_spec("onnxruntime") is None, reason="extra ocr is not installed")
@@ -73,6 +73,44 @@ def test_doubling_the_picture_doubles_the_bar(rng: np.random.Generator) -> None:
     twice = ndimage.zoom(drawn.grey.astype(float), 2, order=1, grid_mode=True, mode="nearest")
     small = find_scale_bars(_grey(drawn.grey), banner_rows=64)[0].length
     assert find_scale_bars(_grey(twice), banner_rows=128)[0].length == pytest.approx(2 * small, rel=0.01)
+
+
+def _plain_strokes(ink: np.ndarray) -> set[tuple[int, int, int, int]]:
+    """Row by row and run by run, as the definition says: strokes of ink with background around."""
+    strokes: list[list[int]] = []
+    for row in range(len(ink)):
+        padded = np.concatenate([[False], ink[row], [False]])
+        steps = np.diff(padded.astype(int))
+        for start, end in zip(np.flatnonzero(steps == 1), np.flatnonzero(steps == -1), strict=True):
+            if end - start < 8:
+                continue
+            for s in strokes:
+                if s[1] == row and abs(s[2] - start) <= 2 and abs(s[3] - end) <= 2:
+                    s[1] = row + 1
+                    break
+            else:
+                strokes.append([row, row + 1, int(start), int(end)])
+
+    def dense(row: int, left: int, right: int) -> bool:
+        return 0 <= row < len(ink) and ink[row, left + 1 : right - 1].mean() > 0.35
+
+    return {
+        (top, bottom, left, right)
+        for top, bottom, left, right in strokes
+        if bottom - top <= max(2, 0.25 * (right - left)) and left > 0 and right < ink.shape[1]
+        if not dense(top - 2, left, right) and not dense(bottom + 1, left, right)
+    }
+
+
+def test_strokes_are_those_of_the_plain_definition(rng: np.random.Generator) -> None:
+    found = 0
+    for number in range(60):
+        rows, columns = rng.integers(1, 80), rng.integers(1, 160)
+        ink = ndimage.gaussian_filter(rng.standard_normal((rows, columns)), (0.3, rng.uniform(1, 9))) > 0.01 * number
+        boxes = {(s.top, s.bottom, s.left, s.right) for s in _free(ink, _strokes(ink))}
+        assert boxes == _plain_strokes(ink)
+        found += len(boxes)
+    assert found > 100
 
 
 @pytest.mark.parametrize("kind", ["porous", "disc", "black", "flat"])
