@@ -25,6 +25,7 @@ from poroscan.demix.path import PATH_COLUMNS, FirstDemixing
 from poroscan.demix.regime import REGIMES
 from poroscan.demix.simulation_settings import SimulationSettings
 from poroscan.errors import SimulationError, StoreError
+from poroscan.intake.field_sections import midway
 
 #: Share of its polymer that a drop must keep to be a particle at all; below, it has dissolved into the bath.
 LEAST_KEPT = 0.6
@@ -209,7 +210,7 @@ def _as_run(job: Job, result: SimulationResult) -> AtlasRun:
         parameters=dict(job.parameters),
         regime=result.regime,
         reading={k: v for k, v in _plain(asdict(result.reading)) if k != "regime"},
-        field=crop_to_particle(result.polymer, job.parameters["polymer"] / 2),
+        field=crop_to_particle(result.polymer, midway(result.polymer)),
         path_columns=PATH_COLUMNS,
         path=_table(result.path),
         demixing_columns=tuple(f.name for f in fields(FirstDemixing)),

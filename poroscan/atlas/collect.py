@@ -9,13 +9,14 @@ from typing import Any
 
 from poroscan.atlas.admission import SLOW, outcome_of
 from poroscan.atlas.describe import view_rows
-from poroscan.atlas.run_file import AtlasRun, load_run, run_to_bytes
+from poroscan.atlas.run_file import AtlasRun, crop_to_particle, load_run, run_to_bytes
 from poroscan.atlas.space import NAMES
 from poroscan.atlas.store import Atlas, run_table, write_atlas
 from poroscan.atlas.table import view_table
 from poroscan.demix.path import PATH_COLUMNS, FirstDemixing, PathRow
 from poroscan.demix.regime import read_regime
 from poroscan.errors import StoreError
+from poroscan.intake.field_sections import midway
 
 
 def collect(
@@ -54,7 +55,8 @@ def collect(
             run = relabelled(load_run(path))
             if outcome_of(run) == SLOW:
                 continue
-            run = dataclasses.replace(run, name=f"{group}-{run.name}")
+            field = crop_to_particle(run.field, midway(run.field))
+            run = dataclasses.replace(run, name=f"{group}-{run.name}", field=field)
             rows += [(len(entries), row) for row in views]
             entries.append((group, run))
             fields.setdefault(group, []).append((run.name, run_to_bytes(run)))

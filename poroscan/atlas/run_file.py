@@ -19,6 +19,7 @@ from typing import Any
 
 import numpy as np
 import numpy.typing as npt
+from scipy.ndimage import uniform_filter
 
 from poroscan.errors import StoreError
 
@@ -75,14 +76,14 @@ class AtlasRun:
 
 
 def crop_to_particle(field: npt.NDArray[np.floating], threshold: float) -> npt.NDArray[np.float32]:
-    """The part of a field that holds every cell above the threshold, with a margin.
+    """The part of a field whose mean over three cells exceeds the threshold, with a margin.
 
     Raises
     ------
     ValueError
         If no cell lies above the threshold.
     """
-    inside = field > threshold
+    inside = uniform_filter(np.asarray(field, dtype=np.float32), 3, mode="nearest") > threshold
     if not inside.any():
         raise ValueError(f"field has no cell above {threshold}; nothing to crop to")
     window = []
