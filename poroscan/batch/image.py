@@ -24,6 +24,7 @@ import tifffile
 
 from poroscan import __version__
 from poroscan.batch.recipe import Recipe
+from poroscan.batch.regimes import RegimeResult, atlas_key, regime_of
 from poroscan.batch.store import FORMAT, RunFolder
 from poroscan.batch.tables import CURVE_SCHEMA, curve_table, parquet_bytes, particle_columns, pore_schema, pore_table
 from poroscan.errors import InputError, MissingExtraError, StoreError
@@ -196,7 +197,7 @@ def fingerprint(task: ImageTask) -> tuple[str | None, str | None]:
         return None, None
     row = task.sidecar
     table = None if row is None else [row.pixel_size_um, row.scale_bar_um, sorted(row.other.items())]
-    parts = [__version__, FORMAT, task.recipe.digest(), task.batch, task.image, own, others, table]
+    parts = [__version__, FORMAT, atlas_key(), task.recipe.digest(), task.batch, task.image, own, others, table]
     return own, hashlib.sha256(json.dumps(parts).encode()).hexdigest()
 
 
@@ -332,10 +333,9 @@ def label_tiff(segmentation: Segmentation, picture: Picture) -> bytes:
 
 def _entry(task: ImageTask, found: _Measured, sha256: str | None) -> dict[str, Any]:
     picture, segmentation = found.picture, found.segmentation
-    rows = [
-        _row(task, found, section, measurement)
-        for section, measurement in zip(segmentation.sections, found.measurements, strict=True)
-    ]
+    sections = list(zip(segmentation.sections, found.measurements, strict=True))
+    regimes = [regime_of(measurement, section.view) for section, measurement in sections]
+    rows = [_row(task, found, *pair, regime) for pair, regime in zip(sections, regimes, strict=True)]
     entry = _empty_entry(task, sha256, "measured" if rows else "no_particle")
     threshold = segmentation.threshold
     entry |= {
@@ -353,6 +353,7 @@ def _entry(task: ImageTask, found: _Measured, sha256: str | None) -> dict[str, A
         "method": segmentation.method,
         "threshold": None if threshold is None else {"level": threshold.level, "uncertainty": threshold.uncertainty},
         "rows": rows or [_blank_row(task, entry["outcome"], picture)],
+        "matches": [regime.match for regime in regimes],
     }
     if not rows:
         entry |= {"reason": FLAGS["no_particle"].words, "remedy": REMEDIES["no_particle"]}
@@ -375,13 +376,16 @@ def _empty_entry(task: ImageTask, sha256: str | None, outcome: str) -> dict[str,
         "notes": [],
         "flags": [],
         "rows": [],
+        "matches": [],
     }
 
 
-def _row(task: ImageTask, found: _Measured, section: Section, measurement: Measurement) -> dict[str, Any]:
+def _row(
+    task: ImageTask, found: _Measured, section: Section, measurement: Measurement, regime: RegimeResult
+) -> dict[str, Any]:
     size = found.picture.pixel_size
     rows, columns = np.nonzero(section.particle)
-    flags = (*found.picture.flags, *found.segmentation.flags, *section.flags, *measurement.record.flags, "no_atlas")
+    flags = (*found.picture.flags, *found.segmentation.flags, *section.flags, *measurement.record.flags, *regime.flags)
     return _complete(
         {
             "batch": task.batch,
@@ -394,6 +398,7 @@ def _row(task: ImageTask, found: _Measured, section: Section, measurement: Measu
             **measurement.record.row(size),
             "touches_frame": section.touches_frame,
             "frame_weight": float(section.frame_weight),
+            **regime.cells,
             "flags": " ".join(ordered_flags(flags)),
             "view": section.view,
         }
