@@ -223,6 +223,11 @@ def by_key(key: str) -> Quantity:
         raise KeyError(f"no column {key!r} in the catalogue; nearest: {', '.join(near) or 'none'}") from None
 
 
+def has_key(key: str) -> bool:
+    """Whether the catalogue has a quantity with this column (micrometre key, pixel twin or base name)."""
+    return key in _BY_KEY
+
+
 def groups() -> Iterator[tuple[str, tuple[Quantity, ...]]]:
     """Catalogue entries by heading, in catalogue order."""
     names = dict.fromkeys(q.group for q in CATALOGUE)
