@@ -1,8 +1,8 @@
 """The recipe of a run: one TOML file, checked key by key, whose content decides the tables.
 
-Sections are the settings of the rooms (``[intake]``, ``[segment]``, ``[measure]``, ``[report]``); ``seed``, ``workers`` and
-``batch_name`` stand above them. ``workers`` and ``[report]`` do not change the tables and are left out of the digest that
-decides whether a run may be continued.
+Sections are the settings of the rooms (``[intake]``, ``[segment]``, ``[measure]``, ``[qc]``, ``[report]``); ``seed``, ``workers`` and
+``batch_name`` stand above them. ``workers``, ``[qc]`` and ``[report]`` change nothing that is measured and are left out of the digest
+that decides whether a run may be continued.
 """
 
 from __future__ import annotations
@@ -21,12 +21,15 @@ import pydantic
 from poroscan.errors import SettingsError
 from poroscan.intake.settings import IntakeSettings
 from poroscan.measure.settings import MeasureSettings
+from poroscan.qc.limits import check_limits
+from poroscan.qc.settings import Limit, QcSettings
+from poroscan.report.regime import REGIME_WORDS
 from poroscan.report.settings import ReportSettings
 from poroscan.report.toml_text import toml_text
 from poroscan.segment.settings import SegmentSettings
 
-#: Keys that leave every number in the tables as it is.
-_WITHOUT_EFFECT = ("workers", "report")
+#: Keys that leave every measured number as it is.
+_WITHOUT_EFFECT = ("workers", "qc", "report")
 
 
 class Recipe(pydantic.BaseModel):
@@ -40,8 +43,8 @@ class Recipe(pydantic.BaseModel):
         Number of processes; None leaves it to the command. Has no influence on any result.
     batch_name
         Name of the batch of pictures that lie directly in the folder; None takes the folder's own name.
-    intake, segment, measure, report
-        Settings of the rooms.
+    intake, segment, measure, qc, report
+        Settings of the rooms; ``qc`` holds the limits.
     """
 
     model_config = pydantic.ConfigDict(extra="forbid", frozen=True)
@@ -52,6 +55,7 @@ class Recipe(pydantic.BaseModel):
     intake: IntakeSettings = IntakeSettings()
     segment: SegmentSettings = SegmentSettings()
     measure: MeasureSettings = MeasureSettings()
+    qc: QcSettings = QcSettings()
     report: ReportSettings = ReportSettings()
 
     def plain(self) -> dict[str, Any]:
@@ -59,7 +63,7 @@ class Recipe(pydantic.BaseModel):
         return self.model_dump(mode="json", exclude={"workers"})
 
     def digest(self) -> str:
-        """SHA-256 of everything that decides the tables."""
+        """SHA-256 of everything that decides what is measured."""
         data = self.model_dump(mode="json", exclude=set(_WITHOUT_EFFECT))
         return hashlib.sha256(json.dumps(data, sort_keys=True).encode()).hexdigest()
 
@@ -109,14 +113,19 @@ def make_recipe(
     Raises
     ------
     SettingsError
-        If a key is unknown or a value wrong.
+        If a key is unknown or a value wrong, or a limit names an unknown quantity or regime.
     """
     merged = _merged(tables or {}, changes or {})
     try:
         # JSON mode is strict about types ("5" is no number, true no integer) and still takes lists for tuples.
-        return Recipe.model_validate_json(json.dumps(merged, default=str), strict=True)
+        recipe = Recipe.model_validate_json(json.dumps(merged, default=str), strict=True)
     except pydantic.ValidationError as error:
         raise SettingsError(f"{where}: " + "; ".join(_words(e, merged) for e in error.errors())) from None
+    try:
+        check_limits(recipe.qc, regimes=[key for key in REGIME_WORDS if key != "unlike_atlas"])
+    except SettingsError as error:
+        raise SettingsError(f"{where}: {error}") from None
+    return recipe
 
 
 def recipe_to_toml(recipe: Recipe) -> str:
@@ -153,7 +162,7 @@ def _known() -> dict[str, tuple[str, ...]]:
     for name, info in Recipe.model_fields.items():
         if dataclasses.is_dataclass(info.annotation):
             known[name] = tuple(f.name for f in dataclasses.fields(info.annotation))
-    return known
+    return known | {"qc.limits": tuple(f.name for f in dataclasses.fields(Limit))}
 
 
 def _words(error: Any, data: Mapping[str, Any]) -> str:
@@ -164,23 +173,35 @@ def _words(error: Any, data: Mapping[str, Any]) -> str:
     found = error.get("input")
     if error["type"] == "value_error":  # from the settings' own checks, which name the key and what it got
         return f"{_shown(place)}: {message}" if len(place) > 1 else f"[{place[0]}] {message}" if place else message
-    return f"{_shown(place)}: {message[:1].lower()}{message[1:]}, not {found!r}"
+    text = f"{_shown(place)}: {message[:1].lower()}{message[1:]}, not {found!r}"
+    if isinstance(found, str) and found[:1].isdigit() and "number" in message:
+        return f"{text}; give the number alone, without quotes: its unit is that of the column"
+    return text
 
 
 def _unknown_key(place: tuple[Any, ...]) -> str:
-    table, key, known = str(place[0]) if len(place) > 1 else "", str(place[-1]), _known()
+    table, key, known = ".".join(str(p) for p in place[:-1] if not isinstance(p, int)), str(place[-1]), _known()
     here = difflib.get_close_matches(key, known.get(table, ()), n=1, cutoff=0.6)
     elsewhere = [t for t, keys in known.items() if t != table and key in keys]
     if here and key not in known.get(table, ()):
-        advice = f"did you mean {_shown((table, here[0]) if table else (here[0],))}?"
+        advice = f"did you mean {_shown((*place[:-1], here[0]))}?"
     elif elsewhere:
-        advice = f"it belongs in {f'[{elsewhere[0]}]' if elsewhere[0] else 'the top of the file, above all tables'}"
+        advice = f"it belongs in {_table(elsewhere[0]) if elsewhere[0] else 'the top of the file, above all tables'}"
     else:
         advice = f"known here: {', '.join(known.get(table, ()))}"
     return f"unknown key {_shown(place)}; {advice}"
 
 
+def _table(name: str) -> str:
+    return f"[[{name}]]" if "." in name else f"[{name}]"
+
+
 def _shown(place: tuple[Any, ...]) -> str:
+    numbers = [i for i, p in enumerate(place) if isinstance(p, int)]
+    if numbers:  # one of several tables of the same name: the reader counts from 1
+        i = numbers[0]
+        table, rest = ".".join(str(p) for p in place[:i]), ".".join(str(p) for p in place[i + 1 :])
+        return f"[[{table}]] number {place[i] + 1}{f', {rest}' if rest else ''}"
     parts = [str(p) for p in place if p != ""]
     if len(parts) == 1:
         return f"[{parts[0]}]" if parts[0] in _known() else parts[0]

@@ -14,17 +14,22 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
+import pyarrow.parquet as pq
+
 from poroscan import __version__
 from poroscan.batch.collate import collate
 from poroscan.batch.image import ImageOutcome, ImageTask, commit_lost, file_sha256, process_image
+from poroscan.batch.limits_table import verdict_line
 from poroscan.batch.names import folder_name
 from poroscan.batch.recipe import Recipe, differences
 from poroscan.batch.store import FORMAT, RunFolder
+from poroscan.batch.summary_json import summary_json
 from poroscan.batch.workers import run_tasks
 from poroscan.errors import InputError, SettingsError, StoreError
 from poroscan.intake.files import shown
 from poroscan.intake.folders import FolderListing, InputFile, Problem, list_inputs
 from poroscan.intake.sidecar import SidecarRow
+from poroscan.qc.ledger import check_ledger
 
 #: Called after every picture with its outcome, the number done, and the number of all.
 Progress = Callable[[ImageOutcome, int, int], None]
@@ -50,6 +55,12 @@ class RunOutcome:
         One line for each input that could not be used: file, what is wrong, what to do.
     notes
         What a reader should know although nothing failed.
+    verdicts
+        One line for each batch where the recipe has limits.
+    outside
+        Whether a batch is outside its limits.
+    ledger_problem
+        Why the batches could not be added to the ledger; empty where they were, or none was named.
     """
 
     path: Path
@@ -59,11 +70,19 @@ class RunOutcome:
     particles: int
     problems: tuple[str, ...]
     notes: tuple[str, ...] = ()
+    verdicts: tuple[str, ...] = ()
+    outside: bool = False
+    ledger_problem: str = ""
 
     @property
     def exit_code(self) -> int:
-        """0 done; 3 some input could not be used."""
-        return 3 if self.problems else 0
+        """0 done; 1 a batch is outside its limits; 2 the ledger could not be used; 3 some input could not be used.
+
+        Of several the first of 2, 1, 3 is given: what the run was asked for and did not do, then what it found.
+        """
+        if self.ledger_problem:
+            return 2
+        return 1 if self.outside else 3 if self.problems else 0
 
 
 def scan_folder(
@@ -73,6 +92,7 @@ def scan_folder(
     *,
     workers: int = 0,
     fresh: bool = False,
+    ledger: str | Path | None = None,
     progress: Progress | None = None,
 ) -> RunOutcome:
     """Measure every picture of a folder and write the run folder.
@@ -92,6 +112,8 @@ def scan_folder(
         Number of processes; 0 works in this process.
     fresh
         Measure every picture anew, and accept a recipe or a folder other than before.
+    ledger
+        File to which the batches are added, and whose trends the report shows.
     progress
         Called after every picture.
 
@@ -102,11 +124,13 @@ def scan_folder(
     SettingsError
         If the run folder was begun with another recipe, or is the folder of pictures itself.
     StoreError
-        If the run folder is in use, damaged, or cannot be written.
+        If the run folder is in use, damaged, or cannot be written; if the ledger cannot be used from the start.
     """
     recipe = recipe or Recipe()
     folder, run = Path(folder), RunFolder(Path(out))
     _check_place(folder, run.path)
+    if ledger is not None:
+        check_ledger(ledger)
     listing = list_inputs(folder, skip=(run.path,))
     with run.locked():
         run.sweep()
@@ -115,7 +139,7 @@ def scan_folder(
         if run.run_file() is None or fresh:
             run.write("run.json", run_json(recipe, state="unfinished", inputs=[]))
         outcomes = _measure(tasks, workers=workers, progress=progress)
-        return _finish(folder, run, recipe, listing, [outcomes[t.name] for t in tasks])
+        return _finish(folder, run, recipe, listing, [outcomes[t.name] for t in tasks], ledger=ledger)
 
 
 def run_json(recipe: Recipe, *, state: str, inputs: list[dict[str, Any]]) -> str:
@@ -216,15 +240,23 @@ def _measure(tasks: list[ImageTask], *, workers: int, progress: Progress | None)
 
 
 def _finish(
-    folder: Path, run: RunFolder, recipe: Recipe, listing: FolderListing, outcomes: list[ImageOutcome]
+    folder: Path,
+    run: RunFolder,
+    recipe: Recipe,
+    listing: FolderListing,
+    outcomes: list[ImageOutcome],
+    *,
+    ledger: str | Path | None,
 ) -> RunOutcome:
-    from poroscan.report.page import write_report
+    from poroscan.batch.reporting import write_reports
 
-    collate(run, outcomes)
+    verdicts = collate(run, outcomes, recipe.qc)
     inputs = [_input_line(o) for o in outcomes] + [_problem_line(folder, p) for p in listing.problems]
-    run.write("run.json", run_json(recipe, state="finished", inputs=inputs))
-    with run.replacing("report.html") as path:
-        write_report(run.path, path)
+    about = run_json(recipe, state="finished", inputs=inputs)
+    _write_summary(run, about)
+    run.write("run.json", about)
+    ledger_problem = _into_ledger(run, ledger)
+    notes = write_reports(run, ledger=None if ledger_problem else ledger)
     lines = [o.line for o in outcomes if o.reason] + [str(p) for p in listing.problems]
     return RunOutcome(
         run.path,
@@ -233,8 +265,29 @@ def _finish(
         sum(o.kept for o in outcomes),
         sum(o.particles for o in outcomes),
         tuple(lines),
-        listing.notes,
+        (*listing.notes, *notes),
+        tuple(verdict_line(v) for v in verdicts if v.outcome is not None),
+        any(v.outcome == "outside" for v in verdicts),
+        ledger_problem,
     )
+
+
+def _write_summary(run: RunFolder, about: str) -> None:
+    batches, limits = (pq.read_table(run.path / f"{name}.parquet").to_pylist() for name in ("batches", "limits"))
+    run.write("summary.json", summary_json(json.loads(about), batches, limits))
+
+
+def _into_ledger(run: RunFolder, ledger: str | Path | None) -> str:
+    """Add the batches; a ledger that cannot be used costs the trend, not the run. Empty, or what is wrong."""
+    if ledger is None:
+        return ""
+    from poroscan.batch.ledger_entry import add_run
+
+    try:
+        add_run(run, ledger)
+    except StoreError as error:
+        return f"{error}; the run itself is complete: give the same command again to add it"
+    return ""
 
 
 def _input_line(outcome: ImageOutcome) -> dict[str, Any]:

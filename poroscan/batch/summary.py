@@ -1,7 +1,8 @@
 """One row per batch: mean over its particles with a 95 % interval, counts, and what was left out.
 
 Particles cut by the frame are left out; the others carry their frame weight, which makes up for large particles being cut more
-often (Miles 1974; Lantuéjoul 1980). The interval takes particles as nested in pictures. Directions are not averaged.
+often (Miles 1974; Lantuéjoul 1980). The interval takes particles as nested in pictures and stays where the quantity can be
+(``qc.interval``). Directions are not averaged.
 """
 
 from __future__ import annotations
@@ -10,14 +11,15 @@ import functools
 import math
 from collections import Counter
 from collections.abc import Iterator, Mapping, Sequence
-from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 import numpy.typing as npt
 import pyarrow as pa
 
-from poroscan.measure.nested import nested_mean
+from poroscan.qc.comparison import BatchMean
+from poroscan.qc.estimate import weighted_mean
+from poroscan.qc.interval import bounds_of, mean_interval
 from poroscan.quantities import CATALOGUE, Quantity
 
 #: Columns before the quantities.
@@ -27,29 +29,6 @@ VERDICT_COLUMNS = ("regime", "regime_probability", "regime_set", "verdict", "fla
 
 AVERAGED: tuple[Quantity, ...] = tuple(q for q in CATALOGUE if q.unit != "°")
 _VALUE_COLUMNS: tuple[str, ...] = tuple(k for q in AVERAGED for k in (q.key, q.pixel_key) if k)
-
-
-@dataclass(frozen=True)
-class BatchMean:
-    """Mean of one quantity over the particles of a batch.
-
-    Parameters
-    ----------
-    mean
-        Estimate of the batch mean; NaN where no particle has a value.
-    low, high
-        Ends of its 95 % interval; NaN with fewer than two particles. With one picture it covers that picture only.
-    sd
-        Standard deviation between particles; NaN with fewer than two.
-    number
-        Particles with a value.
-    """
-
-    mean: float
-    low: float
-    high: float
-    sd: float
-    number: int
 
 
 @functools.cache
@@ -119,7 +98,7 @@ class BatchCollector:
         table = np.array(self._values, dtype=np.float64).reshape(len(self._values), len(_VALUE_COLUMNS))
         weights, images = np.array(self._weights, dtype=np.float64), np.array(self._images, dtype=np.intp)
         means = {
-            column: batch_mean(table[good, j], weights[good], images[good])
+            column: (weighted_mean(table[good, j], weights[good], images[good]), int(good.sum()))
             for j, column in enumerate(_VALUE_COLUMNS)
             for good in [np.isfinite(table[:, j])]
         }
@@ -141,42 +120,16 @@ def is_used(row: Mapping[str, Any]) -> bool:
     return row["view"] in ("edge", "interior") or not row["touches_frame"]
 
 
-def batch_mean(
-    values: npt.NDArray[np.float64], weights: npt.NDArray[np.float64], images: npt.NDArray[np.intp]
-) -> BatchMean:
-    """Frame-weighted mean of a batch, with an interval that respects particles within pictures.
-
-    The weighted mean m = Σwy/Σw is a ratio; each particle enters ``measure.nested.nested_mean`` with its linearised value
-    m + w(y − m)/mean(w), which is y itself where the weights are equal (Särndal, Swensson and Wretman, Model Assisted
-    Survey Sampling, 1992, section 5.5).
-
-    Parameters
-    ----------
-    values
-        Finite values, one per particle.
-    weights
-        Positive frame weights of the same length.
-    images
-        Number of the picture of each particle.
-    """
-    n = len(values)
-    if n == 0:
-        return BatchMean(math.nan, math.nan, math.nan, math.nan, 0)
-    mean = float(np.average(values, weights=weights))
-    result = nested_mean(mean + weights * (values - mean) / weights.mean(), images)
-    sd = math.sqrt(float(np.average((values - mean) ** 2, weights=weights)) * n / (n - 1)) if n > 1 else math.nan
-    return BatchMean(result.mean, result.low, result.high, sd, n)
-
-
-def _cells(q: Quantity, means: Mapping[str, BatchMean], *, one_scale: bool) -> Iterator[tuple[str, Any]]:
-    result = means[q.key]
-    yield q.key, result.mean
-    yield f"{q.key}_low", result.low
-    yield f"{q.key}_high", result.high
-    yield f"{q.key}_sd", result.sd
-    yield f"{q.key}_n", result.number
+def _cells(q: Quantity, means: Mapping[str, tuple[BatchMean, int]], *, one_scale: bool) -> Iterator[tuple[str, Any]]:
+    mean, number = means[q.key]
+    low, high = mean_interval(mean, bounds=bounds_of(q.key))
+    yield q.key, mean.mean
+    yield f"{q.key}_low", low
+    yield f"{q.key}_high", high
+    yield f"{q.key}_sd", mean.sd
+    yield f"{q.key}_n", number
     if q.pixel_key:  # pixels of different size are not averaged
-        yield q.pixel_key, means[q.pixel_key].mean if one_scale else math.nan
+        yield q.pixel_key, means[q.pixel_key][0].mean if one_scale else math.nan
 
 
 def _defined(value: Any) -> Any:

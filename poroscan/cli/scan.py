@@ -38,6 +38,10 @@ def command(
         str | None, typer.Option("--batch-name", help="Name of the batch of pictures directly in the folder.")
     ] = None,
     seed: Annotated[int | None, typer.Option("--seed", help="Root of all randomness (default 0).")] = None,
+    ledger: Annotated[
+        Path | None,
+        typer.Option("--ledger", help="File to which the batches are added; the report shows their trends."),
+    ] = None,
     fresh: Annotated[bool, typer.Option("--fresh", help="Measure everything anew, whatever RUN holds.")] = False,
     quiet: Annotated[bool, typer.Option("--quiet", help="Say nothing but errors.")] = False,
     as_json: Annotated[bool, typer.Option("--json", help="Print a summary as JSON.")] = False,
@@ -55,7 +59,7 @@ def command(
 
     number = next((n for n in (workers, settings.workers) if n is not None), min(8, usable_cores()))
     with _progress(quiet=quiet) as progress:
-        outcome = scan_folder(folder, out, settings, workers=number, fresh=fresh, progress=progress)
+        outcome = scan_folder(folder, out, settings, workers=number, fresh=fresh, ledger=ledger, progress=progress)
     _tell(outcome, quiet=quiet, as_json=as_json)
     return outcome.exit_code
 
@@ -76,6 +80,11 @@ def _tell(outcome: RunOutcome, *, quiet: bool, as_json: bool) -> None:
         _say(f"poroscan: {line}")
     if len(outcome.problems) > _MOST_LINES:
         _say(f"poroscan: and {len(outcome.problems) - _MOST_LINES} more; run.json holds them all")
+    if outcome.ledger_problem:
+        _say(f"poroscan: {outcome.ledger_problem}")
+    if not quiet:
+        for line in outcome.verdicts:
+            _say(line)
     if as_json:
         print(json.dumps(_summary(outcome), ensure_ascii=True))
     elif not quiet:
@@ -92,6 +101,8 @@ def _summary(outcome: RunOutcome) -> dict[str, Any]:
         "kept": outcome.kept,
         "particles": outcome.particles,
         "problems": list(outcome.problems),
+        "verdicts": list(outcome.verdicts),
+        "ledger_problem": outcome.ledger_problem,
         "exit_code": outcome.exit_code,
     }
 

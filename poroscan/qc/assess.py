@@ -57,7 +57,7 @@ def assess(
         batches of the particles, without regime.
     """
     found = {str(name): rows for name, rows in particles.groupby("batch", sort=False, dropna=False)}
-    regimes = dict.fromkeys(found, {}) if batches is None else batches
+    regimes: Mapping[str, Mapping[str, Any]] = {name: {} for name in found} if batches is None else batches
     none = particles.iloc[:0]
     return {name: assess_batch(name, found.get(name, none), settings, row=row) for name, row in regimes.items()}
 

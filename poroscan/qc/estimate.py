@@ -48,7 +48,7 @@ def counted(particles: pd.DataFrame) -> pd.DataFrame:
     """
     there = particles["particle"].notna()
     partial = particles["view"].isin(["edge", "interior"])
-    return particles[there & (partial | ~particles["touches_frame"].fillna(False).astype(bool))]
+    return particles[there & (partial | ~particles["touches_frame"].isin([True]))]
 
 
 def sample(particles: pd.DataFrame, key: str) -> Sample:

@@ -8,6 +8,7 @@ transaction, newer ones are refused.
 from __future__ import annotations
 
 import math
+import os
 import sqlite3
 from collections.abc import Iterator, Mapping, Sequence
 from contextlib import closing, contextmanager
@@ -145,6 +146,32 @@ def history(
             (quantity, instrument, instrument, operator, operator),
         ).fetchall()
     return tuple(_point(row) for row in rows)
+
+
+def check_ledger(path: str | Path) -> None:
+    """Find out before the work starts whether a ledger can be used; nothing is made or changed.
+
+    Parameters
+    ----------
+    path
+        Ledger file; it need not exist, its folder must.
+
+    Raises
+    ------
+    StoreError
+        If it is no ledger, from a newer version, locked, read-only, or its folder does not exist.
+    """
+    path = Path(path)
+    if path.is_file():
+        quantities(path)
+        if not os.access(path, os.W_OK):
+            raise StoreError(
+                f"{path}: the ledger is read-only (make the file and its folder writable, or name another file)"
+            )
+    elif path.exists() or not path.parent.is_dir():
+        raise StoreError(f"{path}: a ledger cannot be made here (name a file in a folder that exists)")
+    elif not os.access(path.parent, os.W_OK):
+        raise StoreError(f"{path}: a ledger cannot be made here (make the folder writable, or name another file)")
 
 
 def quantities(path: str | Path) -> tuple[str, ...]:

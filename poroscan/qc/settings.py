@@ -117,5 +117,5 @@ def settings_of(plain: Mapping[str, Any]) -> QcSettings:
         Table ``[qc]`` of a recipe that was checked before; empty gives the defaults.
     """
     limits = tuple(Limit(**(dict(entry) | {"also": tuple(entry.get("also", ()))})) for entry in plain.get("limits", ()))
-    rest = {key: tuple(v) if isinstance(v, list) else v for key, v in plain.items() if key != "limits"}
+    rest: dict[str, Any] = {key: tuple(v) if isinstance(v, list) else v for key, v in plain.items() if key != "limits"}
     return QcSettings(limits=limits, **rest)

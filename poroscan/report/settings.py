@@ -20,6 +20,8 @@ class ReportSettings:
         Longer side of the picture of one particle.
     picture_quality
         Quality of the compressed pictures (1…100).
+    pdf
+        Whether report.pdf is written beside report.html (where the extra ``pdf`` is installed).
 
     Raises
     ------
@@ -31,6 +33,7 @@ class ReportSettings:
     largest_number_of_particles: int = 400
     picture_width_px: int = 280
     picture_quality: int = 40
+    pdf: bool = True
 
     __pydantic_config__: ClassVar[dict[str, str]] = {"extra": "forbid"}
 

@@ -5,6 +5,7 @@ Only what is shown is held in memory.
 
 from __future__ import annotations
 
+import functools
 import itertools
 import json
 from collections.abc import Collection, Mapping
@@ -38,17 +39,44 @@ class RunData:
         Rows of batches.parquet.
     particles
         Rows of particles.parquet.
+    columns
+        Its columns.
     """
 
     path: Path
     run: Mapping[str, Any]
     batches: tuple[Mapping[str, Any], ...]
     particles: tuple[Mapping[str, Any], ...]
+    columns: tuple[str, ...]
 
     @property
     def inputs(self) -> list[Mapping[str, Any]]:
         """One entry per input, as in run.json."""
         return list(self.run["inputs"])
+
+    def folder_of(self, key: Key) -> str:
+        """Folder of a particle's picture, as in run.json.
+
+        Parameters
+        ----------
+        key
+            The particle.
+        """
+        return self._folders[key[:2]]
+
+    @functools.cached_property
+    def _folders(self) -> dict[tuple[str, str], str]:
+        return {(line["batch"], line["image"]): line["folder"] for line in self.run["inputs"] if line["folder"]}
+
+    def existing(self, name: str) -> str:
+        """The same path below the run folder where such a file is there; else empty.
+
+        Parameters
+        ----------
+        name
+            Path below the run folder.
+        """
+        return name if (self.path / name).is_file() else ""
 
     def entry(self, folder: str) -> Mapping[str, Any]:
         """Content of a picture's image.json.
@@ -78,10 +106,11 @@ def read_run_data(path: Path) -> RunData:
     try:
         run = json.loads((path / "run.json").read_text(encoding="utf-8"))
         batches = pq.read_table(path / "batches.parquet").to_pylist()
-        particles = pq.read_table(path / "particles.parquet").to_pylist()
+        table = pq.read_table(path / "particles.parquet")
+        particles = table.to_pylist()
     except (OSError, ValueError, pa.ArrowException) as error:
         raise StoreError(f"{path} cannot be read ({error}); give the scan command again") from None
-    return RunData(path, run, tuple(batches), tuple(particles))
+    return RunData(path, run, tuple(batches), tuple(particles), tuple(table.column_names))
 
 
 def read_curves(path: Path, *, names: Collection[str], keys: Collection[Key]) -> dict[tuple[Key, str], Series]:

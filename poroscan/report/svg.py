@@ -112,7 +112,7 @@ def line_chart(
     body = [*_axes(frame, x_label=x_label, y_label=y_label)]
     for s in drawn:
         body += [*_band(s, frame), *_line(s, frame)]
-    return _svg(body, label=label, size=size)
+    return element(body, label=label, size=size)
 
 
 def dot_chart(rows: Sequence[tuple[str, float, float, float]], *, label: str, width: int = 260) -> Markup:
@@ -139,16 +139,16 @@ def dot_chart(rows: Sequence[tuple[str, float, float, float]], *, label: str, wi
     for tick in ticks(frame.x0, frame.x1):
         x = float(frame.x(tick)) - _LEFT
         body.append(f'<path d="M{x:.1f} 0V{bottom}" stroke="{HAIR}"/>')
-        body.append(_text(x, bottom + 14, _tick_label(tick, frame.x0, frame.x1), anchor="middle"))
+        body.append(text(x, bottom + 14, tick_label(tick, frame.x0, frame.x1), anchor="middle"))
     for number, (name, *values) in enumerate(rows):
         body += _dot(name, [float(frame.x(v)) - _LEFT for v in values], 12 + 32 * number)
-    return _svg(body, label=label, size=(width, height))
+    return element(body, label=label, size=(width, height))
 
 
 def _dot(name: str, places: Sequence[float], y: int) -> Iterable[str]:
     """One row of a dot chart: the name on a white ground, the interval, the dot."""
     x, low, high = places
-    yield f'<g paint-order="stroke" stroke="#fff" stroke-width="4">{_text(0, y, name, fill=INK)}</g>'
+    yield f'<g paint-order="stroke" stroke="#fff" stroke-width="4">{text(0, y, name, fill=INK)}</g>'
     if math.isfinite(low) and math.isfinite(high):
         yield f'<path d="M{low:.1f} {y + 10}H{high:.1f}" stroke="{BLUE}" stroke-width="3"/>'
     if math.isfinite(x):
@@ -219,15 +219,15 @@ def _axes(frame: _Frame, *, x_label: str, y_label: str) -> Iterable[str]:
     for tick in ticks(frame.y0, frame.y1):
         y = float(frame.y(tick))
         yield f'<path d="M{_LEFT:.0f} {y:.1f}H{right:.0f}" stroke="{HAIR}"/>'
-        yield _text(_LEFT - 5, y + 3.5, _tick_label(tick, frame.y0, frame.y1), anchor="end")
+        yield text(_LEFT - 5, y + 3.5, tick_label(tick, frame.y0, frame.y1), anchor="end")
     for tick in log_ticks(frame.x0, frame.x1) if frame.log else ticks(frame.x0, frame.x1):
         x = float(frame.x(tick))
         yield f'<path d="M{x:.1f} {bottom:.0f}v4" stroke="{GREY}"/>'
-        text = _significant(tick) if frame.log else _tick_label(tick, frame.x0, frame.x1)
-        yield _text(x, bottom + 14, text, anchor="middle")
+        words = _significant(tick) if frame.log else tick_label(tick, frame.x0, frame.x1)
+        yield text(x, bottom + 14, words, anchor="middle")
     yield f'<path d="M{_LEFT:.0f} {bottom:.0f}H{right:.0f}" stroke="{GREY}"/>'
-    yield _text(right, frame.height - 5, x_label, anchor="end", fill=INK)
-    yield _text(2, 12, y_label, fill=INK)
+    yield text(right, frame.height - 5, x_label, anchor="end", fill=INK)
+    yield text(2, 12, y_label, fill=INK)
 
 
 def _band(s: Series, frame: _Frame) -> Iterable[str]:
@@ -272,12 +272,34 @@ def _points(x: Array, y: Array) -> str:
     return " ".join(f"{a:.1f} {b:.1f}" for a, b in zip(x, y, strict=True))
 
 
-def _text(x: float, y: float, text: str, *, anchor: str = "start", fill: str = "#5b6673") -> str:
+def text(x: float, y: float, words: str, *, anchor: str = "start", fill: str = "#5b6673") -> str:
+    """One line of text.
+
+    Parameters
+    ----------
+    x, y
+        Place of the anchor on the base line.
+    words
+        The text; escaped here.
+    anchor
+        ``start``, ``middle`` or ``end``.
+    fill
+        Colour.
+    """
     end = "" if anchor == "start" else f' text-anchor="{anchor}"'
-    return f'<text x="{x:.1f}" y="{y:.1f}" fill="{fill}"{end}>{escape(text)}</text>'
+    return f'<text x="{x:.1f}" y="{y:.1f}" fill="{fill}"{end}>{escape(words)}</text>'
 
 
-def _tick_label(tick: float, low: float, high: float) -> str:
+def tick_label(tick: float, low: float, high: float) -> str:
+    """A tick with as many decimals as the ticks of its axis need.
+
+    Parameters
+    ----------
+    tick
+        The tick.
+    low, high
+        Ends of the axis.
+    """
     steps = ticks(low, high)
     step = steps[1] - steps[0] if len(steps) > 1 else abs(tick) or 1.0
     decimals = next((d for d in range(7) if abs(step * 10**d - round(step * 10**d)) < 1e-6), 6)
@@ -288,6 +310,17 @@ def _significant(tick: float) -> str:
     return fixed(tick, max(0, -math.floor(math.log10(tick))))
 
 
-def _svg(body: Iterable[str], *, label: str, size: tuple[int, int]) -> Markup:
+def element(body: Iterable[str], *, label: str, size: tuple[int, int]) -> Markup:
+    """The SVG element around its parts, one picture for a screen reader.
+
+    Parameters
+    ----------
+    body
+        Its parts.
+    label
+        What it shows, in words.
+    size
+        Width and height in units of the page's pixels.
+    """
     head = f'<svg viewBox="0 0 {size[0]} {size[1]}" role="img" aria-label="{escape(label)}" font-size="11">'
     return Markup(head + "".join(body) + "</svg>")

@@ -27,8 +27,15 @@ def toml_text(tables: Mapping[str, Any]) -> str:
     lines = [_line(key, value) for key, value in tables.items() if not isinstance(value, Mapping)]
     for name, table in tables.items():
         if isinstance(table, Mapping):
-            lines += ["", f"[{name}]", *(_line(key, value) for key, value in table.items())]
+            lines += ["", f"[{name}]", *(_line(k, v) for k, v in table.items() if not _are_tables(v))]
+            for key, several in table.items():
+                for inner in several if _are_tables(several) else ():
+                    lines += ["", f"[[{name}.{key}]]", *(_line(k, v) for k, v in inner.items())]
     return "\n".join(lines) + "\n"
+
+
+def _are_tables(value: Any) -> bool:
+    return isinstance(value, list | tuple) and len(value) > 0 and all(isinstance(v, Mapping) for v in value)
 
 
 def _line(key: str, value: Any) -> str:

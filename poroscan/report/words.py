@@ -100,7 +100,9 @@ def in_words(pattern: str, row: Row, key: str) -> str:
     if value == UNDEFINED:
         return ""
     unit = f"\u00a0{q.unit_words}" if _finite(row.get(q.key)) and q.unit_words else ""
-    return pattern.format(f"{value}{unit}") + (f" (95\u00a0% interval {ends}{unit})." if ends else ".")
+    if ends:
+        return pattern.format(f"{value}{unit}") + f" (95\u00a0% interval {ends}{unit})."
+    return pattern.format(f"{value}{unit}") + _no_interval(row, q.key)
 
 
 def pixel_unit(q: Quantity) -> str:
@@ -128,7 +130,7 @@ def per_cent(pattern: str, row: Row, key: str) -> str:
     decimals = decimals_of(value, low, high)
     sentence = pattern.format(f"{fixed(value, decimals)}\u00a0%")
     if low is None or high is None:
-        return f"{sentence}."
+        return sentence + _no_interval(row, key)
     return f"{sentence} (95\u00a0% interval {fixed(low, decimals)} to {fixed(high, decimals)}\u00a0%)."
 
 
@@ -173,19 +175,21 @@ def batch_sentences(row: Row) -> list[str]:
     return [s for s in sentences if s]
 
 
-def regime_sentence(row: Row) -> str:
-    """Which regime made the batch, as far as it is known.
+def short_sentences(row: Row) -> list[str]:
+    """What the batch looks like in one line, for a page with many batches.
 
     Parameters
     ----------
     row
         Row of batches.csv.
     """
-    if not row.get("regime"):
-        return "Demixing regime: none given, because no atlas of simulated particles was available."
-    probability = row.get("regime_probability")
-    sure = f" (probability {plain(probability, digits=2)})" if _finite(probability) else ""
-    return f"Demixing regime: {row['regime']}{sure}; not ruled out: {row.get('regime_set') or row['regime']}."
+    return [" ".join(batch_sentences(row)[:2])]
+
+
+def _no_interval(row: Row, key: str) -> str:
+    """End of a sentence without an interval; one particle is spoken of once and not in every sentence."""
+    several = (row.get(f"{key}_n") or 0) > 1
+    return " (too few particles for an interval)." if several else "."
 
 
 def flag_words(flags: str, *, leave_out: tuple[str, ...] = ("no_atlas",)) -> list[tuple[str, str]]:

@@ -56,8 +56,16 @@ def test_counts_and_what_is_missing_are_said() -> None:
     assert "No particle" in words.batch_sentences(_batch(particles_used=0))[0]
 
 
-def test_regime_in_words() -> None:
-    assert "none given" in words.regime_sentence(_batch())
+def test_without_an_interval_the_sentence_says_so() -> None:
+    row = _batch(
+        porosity=0.05, porosity_low=None, porosity_high=None, porosity_n=4, skin_thickness_um=2.0, skin_thickness_um_n=4
+    )
+    sentences = words.batch_sentences(row)
+    assert sentences[0] == "Pores take up 5.00\u00a0% of the section (too few particles for an interval)."
+    assert "The skin is 2.00\u00a0µm thick (too few particles for an interval)." in sentences
+    alone = words.batch_sentences(row | {"porosity_n": 1, "particles_used": 1, "skin_thickness_um_n": 1})
+    assert alone[0] == "Pores take up 5.00\u00a0% of the section."
+    assert "With one particle there is no interval" in alone[-1]
 
 
 def test_flags_in_words() -> None:

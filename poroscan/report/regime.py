@@ -1,0 +1,76 @@
+"""Regime and advice in words: what the report says of how a batch was made and what to change.
+
+Only what the tables hold is said. Without an atlas there is no regime, and without a regime no advice; both say so.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from types import MappingProxyType
+from typing import Any
+
+from poroscan.report.numbers import plain
+
+Row = Mapping[str, Any]
+
+#: Regime key -> words for people.
+REGIME_WORDS: Mapping[str, str] = MappingProxyType(
+    {
+        "undemixed": "no demixing",
+        "delayed": "delayed demixing",
+        "lean_nucleation": "instantaneous demixing, polymer-lean phase dispersed",
+        "spinodal": "instantaneous demixing, both phases continuous",
+        "rich_nucleation": "instantaneous demixing, polymer-rich phase dispersed",
+        "unlike_atlas": "unlike any simulated particle of the atlas",
+    }
+)
+
+_NONE = "Not determined: no atlas of simulated particles was available."
+
+
+def regime_words(key: str) -> str:
+    """Words of a regime; a key that is not known stands for itself."""
+    return REGIME_WORDS.get(key, key)
+
+
+def regime_answer(row: Row) -> str:
+    """How a batch was made, as far as it is known.
+
+    Parameters
+    ----------
+    row
+        Row of batches.csv.
+    """
+    found = row.get("regime")
+    if not found:
+        return _NONE
+    if found == "unlike_atlas":
+        return "Not determined: the particles are unlike any simulated particle of the atlas."
+    probability = row.get("regime_probability")
+    sure = "" if probability is None else f" (probability {plain(100 * float(probability), digits=2)}\u00a0%)"
+    others = [k for k in str(row.get("regime_set") or "").replace(",", " ").split() if k != found]
+    text = f"{regime_words(found)[:1].upper()}{regime_words(found)[1:]}{sure}"
+    if not others:
+        return f"{text}; the other regimes are ruled out."
+    return f"{text}; not ruled out: {', '.join(map(regime_words, others))}."
+
+
+def advice_answer(row: Row, *, wanted: str | None) -> str:
+    """What should be changed to come from the regime found to the regime wanted.
+
+    Parameters
+    ----------
+    row
+        Row of batches.csv; ``advice`` holds the move in the phase diagram where one was found.
+    wanted
+        Regime wanted; None where the recipe names none.
+    """
+    if row.get("advice"):
+        return str(row["advice"])
+    if not row.get("regime"):
+        return "Nothing can be said: without an atlas of simulated particles there is no regime to move from."
+    if wanted is None:
+        return "Nothing can be said: the recipe names no regime that is wanted ([qc] regime)."
+    if row["regime"] == wanted:
+        return "Nothing: the regime found is the regime wanted."
+    return f"No move from {regime_words(row['regime'])} to {regime_words(wanted)} was found in the atlas."
