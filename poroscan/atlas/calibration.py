@@ -86,7 +86,8 @@ def conformal_level(true: FloatArray, weight: FloatArray, *, coverage: float) ->
     """
     order = np.argsort(true)
     reached = np.cumsum(weight[order])
-    allowed = (1 - coverage) * (reached[-1] + weight.max()) - weight.max()
+    total = reached[-1] + weight.max()
+    allowed = (1 - coverage) * total - weight.max() + 1e-9 * total  # past the rounding of 1 - coverage
     index = int(np.searchsorted(reached, max(allowed, 0.0), side="right"))
     return float(true[order[min(index, len(order) - 1)]])
 
