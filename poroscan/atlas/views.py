@@ -71,7 +71,8 @@ def masks(field: npt.NDArray[np.floating], *, scale: float = 1.0) -> tuple[BoolA
     """Pores and particle of a two-dimensional field of polymer fractions, finer by ``scale``.
 
     Polymer is where the fraction exceeds half-way between the means of the two phases (``midway``), after a Gaussian of one
-    cell that takes out the thermal noise. A core that never demixed counts as polymer, however dilute beside the skin.
+    cell that takes out the thermal noise. A core that never
+    demixed counts as polymer unless it is dilute beside a dense skin.
 
     Raises
     ------
