@@ -2,6 +2,7 @@
 
 settings          what a user can choose
 part, shared      what a module hands back; arrays that several need
+squared_distance  exact distance transform; distance has its half pixel
 porosity          size of the section and its pore share
 bodies            pieces of pore, and bodies where touching pores part
 pore_size         sizes of pore bodies; pore_table has a row for each

@@ -31,13 +31,13 @@ import math
 from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING
 
-import edt
 import numba
 import numpy as np
 import numpy.typing as npt
 
 from poroscan.measure.part import Part, undefined
 from poroscan.measure.settings import MeasureSettings
+from poroscan.measure.squared_distance import squared_distance
 from poroscan.measure.uncertainty import BlockEstimate, block_quantile, block_ratio, estimate_of, threshold_sd
 from poroscan.quantities import Curve, Estimate
 from poroscan.section import BoolArray, Section
@@ -114,11 +114,8 @@ def squared_thickness(phase: BoolArray) -> Int32:
         return np.zeros(phase.shape, dtype=np.int32)
     if phase.all():
         return np.full(phase.shape, -1, dtype=np.int32)
-    volume = np.require(phase, requirements=("C", "W")).reshape((1, *phase.shape) if phase.ndim == 2 else phase.shape)
-    squared = edt.edtsq(volume[0] if phase.ndim == 2 else volume, black_border=False, parallel=1)
+    squared = squared_distance(phase).reshape((1, *phase.shape) if phase.ndim == 2 else phase.shape)
     largest = int(squared.max())
-    # float32 holds every squared distance exactly up to radii of 4096 pixels.
-    squared = squared.reshape(volume.shape).astype(np.int32)
     steps, kinds, shapes = _steps(phase.ndim)
     discs = _undominated(squared, containment_tables(largest, steps=shapes), steps, kinds)
     order = _largest_first(squared.ravel(), discs, largest)
