@@ -176,53 +176,76 @@ def _random(base, key0, key1, amp, middle, x, y, z):
 
 
 @njit(**_FAST)
-def rates(p, n, cells, par, links, shifts, weights, noise, key0, key1, out_p, out_n, buf):
+def rates(p, n, cells, par, links, shifts, weights, noise, key0, key1, block, out_p, out_n, buf):
     """Divergence of the fluxes (deterministic and thermal) over all links; every link is visited once.
 
     ``links[l, r]``: the row that row r meets over link l; ``shifts[l]``: its shift in columns; ``weights[l]``: weight of the link.
-    ``noise`` is sqrt(2·strength/dt); 0 leaves the random numbers out.
+    ``noise`` is sqrt(2·strength/dt); 0 leaves the random numbers out. ``block`` rows, which must divide the rows of a plane, are
+    taken together: as far as they and those they meet follow each other they are one vector, whose ghost cells carry no flux.
     """
-    e_p, e_n, slow, q_p, q_n, q_s = cells
+    e_p, e_n, slow, q_p, q_n, q_s = [a.reshape(-1) for a in cells]
+    p_, n_, o_p, o_n = p.reshape(-1), n.reshape(-1), out_p.reshape(-1), out_n.reshape(-1)
     rows, columns = p.shape[0], p.shape[1] - 2
+    width = columns + 2
     i_p, i_s, i_n = par[3], par[4], par[5]
     one, zero = par.dtype.type(1), par.dtype.type(0)
     c = (one, par[14], par[17], par[18], par[19], par[20], par[21])
     middle, unit = par[15], par[16]
-    for r in range(rows):
-        for j in range(columns + 2):
-            out_p[r, j] = zero
-            out_n[r, j] = zero
-    f_p, f_n = buf[0, 1:-1], buf[1, 1:-1]
-    x, y, z = buf[2, 1:-1], buf[3, 1:-1], buf[4, 1:-1]
-    for r in range(rows):
+    o_p[:] = zero
+    o_n[:] = zero
+    for first in range(0, rows, block):
         for k in range(links.shape[0]):
-            q, s, weight = links[k, r], shifts[k], weights[k]
-            lo, hi = 1 + s, columns + 1 + s
-            if noise > zero:
-                base = np.uint32((r * links.shape[0] + k) * columns)
-                _random(base, key0, key1, noise / np.sqrt(weight) * unit, middle, x, y, z)
-                _link(
-                    p[r, 1:-1], p[q, lo:hi], n[r, 1:-1], n[q, lo:hi], e_p[r, 1:-1], e_p[q, lo:hi], e_n[r, 1:-1],
-                    e_n[q, lo:hi], slow[r, 1:-1], slow[q, lo:hi], q_p[r, 1:-1], q_p[q, lo:hi], q_n[r, 1:-1], q_n[q, lo:hi],
-                    q_s[r, 1:-1], q_s[q, lo:hi], x, y, z, i_p, i_s, i_n, weight, c, f_p, f_n,
-                )  # fmt: skip
-            else:
-                _link_still(
-                    p[r, 1:-1], p[q, lo:hi], n[r, 1:-1], n[q, lo:hi], e_p[r, 1:-1], e_p[q, lo:hi], e_n[r, 1:-1],
-                    e_n[q, lo:hi], slow[r, 1:-1], slow[q, lo:hi], q_p[r, 1:-1], q_p[q, lo:hi], q_n[r, 1:-1], q_n[q, lo:hi],
-                    q_s[r, 1:-1], q_s[q, lo:hi], i_p, i_s, i_n, weight, c, f_p, f_n,
-                )  # fmt: skip
-            here_p, here_n, there_p, there_n = out_p[r, 1:-1], out_n[r, 1:-1], out_p[q, lo:hi], out_n[q, lo:hi]
-            for j in range(columns):
-                here_p[j] += f_p[j]
-                here_n[j] += f_n[j]
-            for j in range(columns):
-                there_p[j] -= f_p[j]
-                there_n[j] -= f_n[j]
+            s, weight = shifts[k], weights[k]
+            r = first
+            while r < first + block:
+                q, end = links[k, r], r + 1
+                while end < first + block and links[k, end] == q + end - r:
+                    end += 1
+                size = (end - r) * width - 2
+                h, t = r * width + 1, q * width + 1 + s
+                hh, tt = h + size, t + size
+                f_p, f_n = buf[0, :size], buf[1, :size]
+                if noise > zero:
+                    x, y, z = buf[2, :size], buf[3, :size], buf[4, :size]
+                    amp = noise / np.sqrt(weight) * unit
+                    for i in range(r, end):
+                        base, at = np.uint32((i * links.shape[0] + k) * columns), (i - r) * width
+                        past = at + columns
+                        _random(base, key0, key1, amp, middle, x[at:past], y[at:past], z[at:past])
+                    _link(
+                        p_[h:hh], p_[t:tt], n_[h:hh], n_[t:tt], e_p[h:hh], e_p[t:tt], e_n[h:hh], e_n[t:tt], slow[h:hh],
+                        slow[t:tt], q_p[h:hh], q_p[t:tt], q_n[h:hh], q_n[t:tt], q_s[h:hh], q_s[t:tt], x, y, z, i_p, i_s,
+                        i_n, weight, c, f_p, f_n,
+                    )  # fmt: skip
+                else:
+                    _link_still(
+                        p_[h:hh], p_[t:tt], n_[h:hh], n_[t:tt], e_p[h:hh], e_p[t:tt], e_n[h:hh], e_n[t:tt], slow[h:hh],
+                        slow[t:tt], q_p[h:hh], q_p[t:tt], q_n[h:hh], q_n[t:tt], q_s[h:hh], q_s[t:tt], i_p, i_s, i_n, weight,
+                        c, f_p, f_n,
+                    )  # fmt: skip
+                for g in range(columns, size, width):
+                    f_p[g], f_p[g + 1], f_n[g], f_n[g + 1] = zero, zero, zero, zero
+                _add(o_p[h:hh], o_n[h:hh], f_p, f_n)
+                _subtract(o_p[t:tt], o_n[t:tt], f_p, f_n)
+                r = end
     for out in (out_p, out_n):
         for r in range(rows):
             out[r, 1] += out[r, columns + 1]
             out[r, columns] += out[r, 0]
+
+
+@njit(**_FAST)
+def _add(to_p, to_n, f_p, f_n):
+    for j in range(f_p.size):
+        to_p[j] += f_p[j]
+        to_n[j] += f_n[j]
+
+
+@njit(**_FAST)
+def _subtract(to_p, to_n, f_p, f_n):
+    for j in range(f_p.size):
+        to_p[j] -= f_p[j]
+        to_n[j] -= f_n[j]
 
 
 @njit(**_FAST)

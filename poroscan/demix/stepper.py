@@ -16,12 +16,14 @@ from scipy import fft
 
 from poroscan.demix import kernels
 from poroscan.demix.flow import StokesFlow
+from poroscan.demix.interaction import Interaction
 from poroscan.demix.lattice import Lattice, lattice
 from poroscan.demix.mixture import Mixture
 from poroscan.demix.noise import noise_keys
 from poroscan.demix.simulation_settings import SimulationSettings
 from poroscan.demix.stability import implicit_rates
-from poroscan.errors import SettingsError, SimulationError
+from poroscan.demix.varying import varying_potentials
+from poroscan.errors import SimulationError
 
 FloatArray = npt.NDArray[np.floating]
 
@@ -29,6 +31,8 @@ FloatArray = npt.NDArray[np.floating]
 _TINY = 1e-12
 #: Halvings of the longest step before a run is given up.
 _HALVINGS = 14
+#: Most rows of a volume joined into one vector: their arrays still fit into the cache next to the core.
+_BLOCK = 16
 
 
 @dataclass(eq=False)
@@ -38,7 +42,7 @@ class Stepper:
     Parameters
     ----------
     mixture
-        Thermodynamics; constant interaction parameters.
+        Thermodynamics. Interaction parameters that depend on composition cost a pass of numpy over the cells for each.
     settings
         Kinetics, noise, precision and step control.
     polymer, nonsolvent
@@ -48,8 +52,6 @@ class Stepper:
 
     Raises
     ------
-    SettingsError
-        If the interaction parameters depend on composition.
     ValueError
         If the fields differ in shape, are not finite, or are no fractions.
     """
@@ -66,10 +68,6 @@ class Stepper:
     refused: int = field(default=0, init=False)
 
     def __post_init__(self) -> None:
-        if not self.mixture.is_constant:
-            raise SettingsError(
-                "interactions: a simulation needs constant interaction parameters; give numbers instead of functions of composition"
-            )
         _check_fields(self.polymer, self.nonsolvent)
         dtype = np.dtype(self.settings.precision)
         self._shape = self.polymer.shape
@@ -78,7 +76,8 @@ class Stepper:
         self._p, self._n = (self._padded(a, rows, columns, dtype) for a in (self.polymer, self.nonsolvent))
         self._cells = tuple(np.zeros_like(self._p) for _ in range(6))
         self._out = [np.zeros_like(self._p) for _ in range(2)]
-        self._buffer = np.zeros((5, columns + 2), dtype)
+        self._block = _block(self._shape)
+        self._buffer = np.zeros((5, self._block * (columns + 2)), dtype)
         self._par = _parameters(self.mixture, self.settings, dtype)
         self._weights = self._lattice.weights.astype(dtype)
         self._coefficients = self._lattice.coefficients.astype(dtype)
@@ -124,6 +123,9 @@ class Stepper:
         """Rate of change of both fields (thermal flux for a step of length dt included), views of shape ``shape``."""
         p, n, cells, table = self._p, self._n, self._cells, self._lattice
         kernels.potentials(p, n, self._par, table.offsets, self._coefficients, cells, self._buffer)
+        if not self.mixture.is_constant:
+            for cell, change in zip(cells, varying_potentials(self.mixture, n, p), strict=False):
+                cell += change  # ghost cells included: those of p and n are filled
         for cell in cells[3:]:
             np.log(cell, out=cell)
         noise = self._par.dtype.type(np.sqrt(2 * self.settings.noise / dt))
@@ -139,6 +141,7 @@ class Stepper:
             noise,
             key0,
             key1,
+            self._block,
             *self._out,
             self._buffer,
         )
@@ -220,6 +223,13 @@ class Stepper:
         return self._multipliers[dt]
 
 
+def _block(shape: tuple[int, ...]) -> int:
+    """Rows that the compiled loop takes together: one in 2-D; in 3-D, where rows are short, a divisor of the rows of a plane."""
+    if len(shape) == 2:
+        return 1
+    return max(d for d in range(1, min(_BLOCK, shape[1]) + 1) if shape[1] % d == 0)
+
+
 def _check_fields(polymer: FloatArray, nonsolvent: FloatArray) -> None:
     if polymer.shape != nonsolvent.shape:
         raise ValueError(f"polymer and nonsolvent must have one shape, not {polymer.shape} and {nonsolvent.shape}")
@@ -230,10 +240,12 @@ def _check_fields(polymer: FloatArray, nonsolvent: FloatArray) -> None:
 
 
 def _parameters(mixture: Mixture, settings: SimulationSettings, dtype: np.dtype) -> FloatArray:
-    """The kernels' parameter vector; its order is that in ``kernels``."""
+    """The kernels' parameter vector; its order is that in ``kernels``. Varying interaction parameters are added elsewhere."""
+    parameters = (mixture.chi_sn, mixture.chi_pn, mixture.chi_ps)
+    constant = [0.0 if isinstance(chi, Interaction) else chi for chi in parameters]
     return np.array(
         [
-            mixture.chi_sn, mixture.chi_pn, mixture.chi_ps, 1 / mixture.N_p, 1 / mixture.N_s, 1 / mixture.N_n,
+            *constant, 1 / mixture.N_p, 1 / mixture.N_s, 1 / mixture.N_n,
             settings.kappa_polymer, settings.kappa_nonsolvent, settings.polymer_mobility, settings.arrest_fraction,
             1 / settings.arrest_width, settings.arrest_floor, 14.0, 1 / 64, 0.5, 511.5, np.sqrt(12 / (1024**2 - 1)), _TINY, 0.25, 1 / 12, 1 / 120, 17 / 20160,
         ],

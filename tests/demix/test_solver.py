@@ -11,7 +11,7 @@ from solver_cases import BINARY, TERNARY, links, quiet_settings, slow_laplacian,
 from poroscan.demix.lattice import lattice
 from poroscan.demix.stability import arrest, hessian_matrix, implicit_rates, mobility
 from poroscan.demix.stepper import Stepper
-from poroscan.errors import SettingsError, SimulationError
+from poroscan.errors import SimulationError
 
 SHAPES = [(12, 16), (8, 6, 10)]
 
@@ -211,11 +211,3 @@ def test_step_control_refuses_a_step_too_long(rng):
     stepper = Stepper(replace(TERNARY, chi_pn=4.0), quiet_settings(max_step=8.0, max_change=0.002), p, n)
     assert stepper.step() < 1.0
     assert stepper.refused > 0
-
-
-def test_composition_dependent_interaction_is_refused(rng):
-    from poroscan.demix.interaction import SharePolynomial
-
-    p, n = _random(rng, (16, 16))
-    with pytest.raises(SettingsError, match="constant interaction parameters"):
-        Stepper(replace(TERNARY, chi_sn=SharePolynomial((0.5, 0.3))), quiet_settings(), p, n)
