@@ -16,6 +16,7 @@ from poroscan.demix.lever import Lever
 from poroscan.demix.path import INTERFACE_WIDTHS, FirstDemixing, PathRecorder, PathRow
 from poroscan.demix.phase_diagram import PhaseDiagram, find_phase_diagram
 from poroscan.demix.regime import RegimeReading, read_regime
+from poroscan.demix.repair import repair_fractions
 from poroscan.demix.simulation_settings import SimulationSettings
 from poroscan.demix.stability import interface_width
 from poroscan.demix.stepper import Stepper
@@ -36,11 +37,15 @@ _QUIET_CHANGE = 1e-3
 
 @dataclass(frozen=True, eq=False)
 class Snapshot:
-    """Fields at one time (over R²/D): fractions of polymer and non-solvent."""
+    """Fields at one time (over R²/D): fractions of polymer and non-solvent, repaired as those of the result.
+
+    ``repaired_share`` is what that took.
+    """
 
     exchange_time: float
     polymer: FloatArray
     nonsolvent: FloatArray
+    repaired_share: float = 0.0
 
 
 @dataclass(frozen=True, eq=False)
@@ -50,7 +55,7 @@ class SimulationResult:
     Parameters
     ----------
     polymer, nonsolvent
-        Fractions at the end, 2-D or 3-D.
+        Fractions at the end, 2-D or 3-D; none of them, nor solvent, is negative (:mod:`poroscan.demix.repair`).
     path
         Rows of the path table.
     demixings
@@ -66,8 +71,10 @@ class SimulationResult:
     outcome
         ``finished`` (end time reached) or ``still`` (nothing moved any more).
     least_fraction
-        Least value of any of the three fractions at the end. The scheme does not force fractions to be positive; values
-        slightly below 0 sit next to interfaces and are kept as they are.
+        Least value of any of the three fractions at the end before the repair. The scheme does not force fractions to be
+        positive while it steps; values slightly below 0 sit where a component is nearly absent.
+    repaired_share
+        Volume exchanged between neighbouring cells to mend that, over the volume of the box.
     """
 
     polymer: FloatArray
@@ -80,6 +87,7 @@ class SimulationResult:
     steps: int
     outcome: str
     least_fraction: float
+    repaired_share: float = 0.0
 
     @property
     def regime(self) -> str:
@@ -114,7 +122,7 @@ def simulate(
     Raises
     ------
     SettingsError
-        If the interface is thinner than the grid can resolve, or the interaction parameters depend on composition.
+        If the interface is thinner than the grid can resolve.
     SimulationError
         If the run becomes unstable, or its phase diagram cannot be found.
     StoreError
@@ -149,18 +157,26 @@ def simulate(
     polymer, nonsolvent = stepper.fields()
     least = float(min(polymer.min(), nonsolvent.min(), (1 - polymer - nonsolvent).min()))
     reading = read_regime(recorder.rows, recorder.demixings, dimensions=settings.dimensions)
+    final = repair_fractions(polymer, nonsolvent)
     return SimulationResult(
-        polymer=polymer,
-        nonsolvent=nonsolvent,
+        polymer=final.polymer,
+        nonsolvent=final.nonsolvent,
         path=tuple(recorder.rows),
         demixings=tuple(recorder.demixings),
         reading=reading,
-        snapshots=tuple(snapshots),
+        snapshots=tuple(map(_repaired, snapshots)),
         seed=int(seed),
         steps=stepper.count,
         outcome=outcome,
         least_fraction=least,
+        repaired_share=final.share,
     )
+
+
+def _repaired(snapshot: Snapshot) -> Snapshot:
+    """Only results are repaired; checkpoints keep what the solver holds."""
+    fields = repair_fractions(snapshot.polymer, snapshot.nonsolvent)
+    return Snapshot(snapshot.exchange_time, fields.polymer, fields.nonsolvent, fields.share)
 
 
 def check_resolution(formulation: Formulation) -> None:

@@ -31,8 +31,13 @@ def write_simulation(out: Path, formulation: Formulation, result: SimulationResu
     Raises
     ------
     ValueError
-        If a field is not finite; nothing is written then.
+        If a field is not finite or holds a negative fraction; nothing is written then.
     """
+    shots: tuple[SimulationResult | Snapshot, ...] = (result, *result.snapshots)
+    for field in shots:
+        parts = (field.polymer, field.nonsolvent, 1 - field.polymer - field.nonsolvent)
+        if min(part.min() for part in parts) < 0:
+            raise ValueError("polymer, nonsolvent and solvent must not be negative; repair_fractions mends a field")
     out.mkdir(parents=True, exist_ok=True)
     write_npz(out / "fields.npz", field_arrays(formulation, result))
     _write_text(out / "simulation.json", json.dumps(summary(formulation, result), indent=1, ensure_ascii=False) + "\n")
@@ -70,6 +75,8 @@ def summary(formulation: Formulation, result: SimulationResult) -> dict[str, Any
         "steps": result.steps,
         "exchange_time": result.path[-1].exchange_time,
         "least_fraction": result.least_fraction,
+        "repaired_share": result.repaired_share,
+        "snapshot_repaired_shares": [shot.repaired_share for shot in result.snapshots],
         "regime": reading,
     }
 
