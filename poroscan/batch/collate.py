@@ -79,12 +79,13 @@ def _particles_and_batches(run: RunFolder, outcomes: Iterable[ImageOutcome], qc:
         for batch, members in itertools.groupby(outcomes, key=lambda o: o.batch):
             collector, values = BatchCollector(batch), []
             for outcome in members:
-                rows = _rows(run, outcome)
-                collector.add_image(rows, measured=outcome.outcome == "measured")
+                entry = _entry(run, outcome)
+                rows: list[dict[str, Any]] = entry["rows"]
+                collector.add_image(rows, measured=outcome.outcome == "measured", matches=entry["matches"])
                 particles_csv.writerows(map(csv_row, rows))
                 particles.add_rows(rows)
                 values += [[row[column] for column in judged] for row in rows]
-            summary = collector.row()
+            summary = collector.row(wanted=qc.regime)
             assessment = assess_batch(batch, pd.DataFrame(values, columns=list(judged)), qc, row=summary)
             assessments.append(assessment)
             summary["verdict"] = assessment.outcome
@@ -112,9 +113,8 @@ def _open_csv(stack: contextlib.ExitStack, run: RunFolder, name: str, columns: S
     return csv_writer(stack.enter_context(path.open("w", encoding="utf-8", newline="")), columns)
 
 
-def _rows(run: RunFolder, outcome: ImageOutcome) -> list[dict[str, Any]]:
+def _entry(run: RunFolder, outcome: ImageOutcome) -> dict[str, Any]:
     entry = run.entry(outcome.name)
     if entry is None:
         raise StoreError(f"{run.images / outcome.name} has gone or is damaged; run the same command again")
-    rows: list[dict[str, Any]] = entry["rows"]
-    return rows
+    return entry

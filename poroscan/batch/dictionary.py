@@ -29,6 +29,7 @@ _BATCH_WORDS: Mapping[str, str] = MappingProxyType(
         "regime_probability": ROW_COLUMNS["regime_probability"],
         "regime_set": ROW_COLUMNS["regime_set"],
         "atlas_distance": ROW_COLUMNS["atlas_distance"],
+        "advice": "moves from the regime found to the regime wanted, with their evidence; empty where there is none",
         "verdict": "within, outside or not_decided; empty where the recipe has no limits",
         "flags": ROW_COLUMNS["flags"],
     }

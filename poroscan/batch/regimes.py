@@ -13,7 +13,8 @@ from collections.abc import Mapping, Sequence
 from dataclasses import asdict, dataclass
 from typing import Any
 
-from poroscan.atlas import Match, Matcher, has_packaged, load_packaged, pool
+from poroscan.atlas import BatchMatch, Match, Matcher, has_packaged, load_packaged, pool, what_to_change
+from poroscan.atlas.advice import CAUTION
 from poroscan.atlas.parameters import Interval
 from poroscan.atlas.store import PACKAGED
 from poroscan.measure import Measurement
@@ -67,22 +68,38 @@ def regime_of(measurement: Measurement, view: str) -> RegimeResult:
     return RegimeResult(cells, match.flags, _plain(asdict(match)))
 
 
-def pooled_cells(matches: Sequence[Mapping[str, Any]]) -> dict[str, Any]:
+def pooled_cells(matches: Sequence[Mapping[str, Any]], *, wanted: str | None = None) -> dict[str, Any]:
     """Columns of batches.csv from the matches of a batch's particles, as ``regime_of`` wrote them.
 
     Parameters
     ----------
     matches
         One per particle that counts; empty where none was matched.
+    wanted
+        Regime wanted, for the advice; None asks for none.
     """
     if not matches:
-        return {"regime": None, "regime_probability": None, "regime_set": None}
+        return {"regime": None, "regime_probability": None, "regime_set": None, "advice": None}
     found = pool([_match(m) for m in matches])
     return {
         "regime": found.regime or None,
         "regime_probability": _number(found.probability),
         "regime_set": " ".join(found.prediction_set) or None,
+        "advice": _advice(found, matches, wanted),
     }
+
+
+def _advice(found: BatchMatch, matches: Sequence[Mapping[str, Any]], wanted: str | None) -> str | None:
+    """Moves from the regime found to the one wanted, with their evidence; None where there is nothing to say."""
+    matcher = _matcher()
+    if matcher is None or wanted is None or found.regime not in found.probabilities or found.regime == wanted:
+        return None
+    like = [n["run"] for m in matches for n in m["nearest"]]
+    moves = what_to_change(matcher.atlas, found.regime, wanted, like=like)
+    if not moves:
+        return None
+    told = "; ".join(f"{m.words} ({max(m.up, m.down)} of {m.up + m.down} pairs of simulations)" for m in moves)
+    return f"{told[:1].upper()}{told[1:]}. {CAUTION}"
 
 
 def _match(plain: Mapping[str, Any]) -> Match:

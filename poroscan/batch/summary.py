@@ -8,6 +8,7 @@ often (Miles 1974; Lantuéjoul 1980). The interval takes particles as nested in 
 from __future__ import annotations
 
 import functools
+import itertools
 import math
 from collections import Counter
 from collections.abc import Iterator, Mapping, Sequence
@@ -17,6 +18,7 @@ import numpy as np
 import numpy.typing as npt
 import pyarrow as pa
 
+from poroscan.batch.regimes import pooled_cells
 from poroscan.qc.comparison import BatchMean
 from poroscan.qc.estimate import weighted_mean
 from poroscan.qc.interval import bounds_of, mean_interval
@@ -24,8 +26,8 @@ from poroscan.quantities import CATALOGUE, Quantity
 
 #: Columns before the quantities.
 COUNT_COLUMNS = ("batch", "images", "images_measured", "particles", "particles_used", "particles_cut_by_frame")
-#: Columns after the quantities; those of regime and limits are filled once an atlas and limits are there.
-VERDICT_COLUMNS = ("regime", "regime_probability", "regime_set", "verdict", "flags")
+#: Columns after the quantities; those of the regime are empty without an atlas, the verdict without limits.
+VERDICT_COLUMNS = ("regime", "regime_probability", "regime_set", "advice", "verdict", "flags")
 
 AVERAGED: tuple[Quantity, ...] = tuple(q for q in CATALOGUE if q.unit != "°")
 _VALUE_COLUMNS: tuple[str, ...] = tuple(k for q in AVERAGED for k in (q.key, q.pixel_key) if k)
@@ -44,7 +46,7 @@ def batch_columns() -> tuple[str, ...]:
 @functools.cache
 def batch_schema() -> pa.Schema:
     """Arrow schema of batches.parquet; undefined numbers are null."""
-    text = {"batch", "regime", "regime_set", "verdict", "flags"}
+    text = {"batch", "regime", "regime_set", "advice", "verdict", "flags"}
     counts = set(COUNT_COLUMNS[1:]) | {f"{q.key}_n" for q in AVERAGED}
     kinds = {True: pa.string(), False: pa.float64()}
     return pa.schema([(c, pa.int64() if c in counts else kinds[c in text]) for c in batch_columns()])
@@ -66,8 +68,15 @@ class BatchCollector:
         self._weights: list[float] = []
         self._images: list[int] = []
         self._scales: set[float | None] = set()
+        self._matches: list[Mapping[str, Any]] = []
 
-    def add_image(self, rows: Sequence[Mapping[str, Any]], *, measured: bool) -> None:
+    def add_image(
+        self,
+        rows: Sequence[Mapping[str, Any]],
+        *,
+        measured: bool,
+        matches: Sequence[Mapping[str, Any] | None] = (),
+    ) -> None:
         """Take the rows of one picture.
 
         Parameters
@@ -76,10 +85,12 @@ class BatchCollector:
             Its rows of particles.csv; one without a particle is passed over.
         measured
             Whether a particle was measured in it.
+        matches
+            Match of each particle with the atlas, in the order of ``rows``; None or nothing without an atlas.
         """
         self._counts["images"] += 1
         self._counts["images_measured"] += measured
-        for row in rows:
+        for row, match in itertools.zip_longest(rows, matches):
             if row["particle"] is None:
                 continue
             self._counts["particles"] += 1
@@ -91,9 +102,17 @@ class BatchCollector:
             self._weights.append(_weight(row))
             self._images.append(self._counts["images"])
             self._scales.add(row["pixel_size_um"])
+            if match is not None:
+                self._matches.append(match)
 
-    def row(self) -> dict[str, Any]:
-        """The row of batches.csv."""
+    def row(self, *, wanted: str | None = None) -> dict[str, Any]:
+        """The row of batches.csv.
+
+        Parameters
+        ----------
+        wanted
+            Regime wanted, for the advice; None asks for none.
+        """
         row: dict[str, Any] = {"batch": self._batch} | {c: self._counts[c] for c in COUNT_COLUMNS[1:]}
         table = np.array(self._values, dtype=np.float64).reshape(len(self._values), len(_VALUE_COLUMNS))
         weights, images = np.array(self._weights, dtype=np.float64), np.array(self._images, dtype=np.intp)
@@ -104,8 +123,11 @@ class BatchCollector:
         }
         for q in AVERAGED:
             row.update(_cells(q, means, one_scale=len(self._scales) <= 1))
+        regime = pooled_cells(self._matches, wanted=wanted)
         flags = ["no_pixel_size"] if None in self._scales else []
-        row |= dict.fromkeys(VERDICT_COLUMNS) | {"flags": " ".join([*flags, "no_atlas"])}
+        flags += [] if self._matches else ["no_atlas"]
+        flags += ["unlike_atlas"] if regime["regime"] == "unlike_atlas" else []
+        row |= dict.fromkeys(VERDICT_COLUMNS) | regime | {"flags": " ".join(flags)}
         return {column: _defined(row[column]) for column in batch_columns()}
 
 

@@ -51,8 +51,8 @@ def regime_answer(row: Row) -> str:
     others = [k for k in str(row.get("regime_set") or "").replace(",", " ").split() if k != found]
     text = f"{regime_words(found)[:1].upper()}{regime_words(found)[1:]}{sure}"
     if not others:
-        return f"{text}; the other regimes are ruled out."
-    return f"{text}; not ruled out: {', '.join(map(regime_words, others))}."
+        return f"{text}; no other regime is in the 90\u00a0% set."
+    return f"{text}; also in the 90\u00a0% set: {', '.join(map(regime_words, others))}."
 
 
 def advice_answer(row: Row, *, wanted: str | None) -> str:

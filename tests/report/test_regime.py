@@ -17,9 +17,9 @@ def test_a_regime_comes_with_what_is_not_ruled_out() -> None:
     row = {"regime": "spinodal", "regime_probability": 0.873, "regime_set": "spinodal lean_nucleation"}
     assert regime_answer(row) == (
         "Instantaneous demixing, both phases continuous (probability 87\u00a0%); "
-        "not ruled out: instantaneous demixing, polymer-lean phase dispersed."
+        "also in the 90\u00a0% set: instantaneous demixing, polymer-lean phase dispersed."
     )
-    assert "are ruled out" in regime_answer(row | {"regime_set": "spinodal"})
+    assert "no other regime" in regime_answer(row | {"regime_set": "spinodal"})
     assert "unlike any" in regime_answer({"regime": "unlike_atlas"})
 
 
