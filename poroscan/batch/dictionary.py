@@ -122,7 +122,7 @@ def _curve_column(name: str) -> dict[str, str]:
 
 
 def _pore_column(name: str) -> dict[str, str]:
-    if name in ROW_COLUMNS:
+    if name in ("batch", "image", "particle"):
         return {"definition": ROW_COLUMNS[name]}
     for base, column in PORE_COLUMNS.items():
         um, px = (base + suffix for suffix in SUFFIXES[column.power]) if column.power else (base, f"{base}_px")

@@ -11,7 +11,7 @@ from poroscan.report.content import report_content
 from poroscan.report.page import write_page
 from poroscan.report.pdf import write_pdf
 from poroscan.report.source import read_run_data
-from poroscan.report.trend_view import trend_views
+from poroscan.report.trend_view import trend_section
 
 
 def write_reports(run: RunFolder, *, ledger: str | Path | None = None) -> list[str]:
@@ -40,7 +40,7 @@ def write_reports(run: RunFolder, *, ledger: str | Path | None = None) -> list[s
     trends = None
     if ledger is not None:
         settings = settings_of(data.run["recipe"].get("qc", {}))
-        trends = trend_views(ledger, settings, current=[str(b["batch"]) for b in data.batches])
+        trends = trend_section(ledger, settings, current=[str(b["batch"]) for b in data.batches])
     content = report_content(data, trends=trends)
     with run.replacing("report.html") as path:
         write_page(content, run.path, path)

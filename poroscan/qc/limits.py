@@ -12,7 +12,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Literal
 
 import numpy as np
@@ -28,6 +28,9 @@ from poroscan.quantities import Quantity, by_key
 
 Outcome = Literal["within", "outside", "not_decided"]
 FloatArray = npt.NDArray[np.float64]
+
+#: Nobody cuts more particles than this to have a share decided.
+_MOST_FURTHER = 100_000
 
 
 @dataclass(frozen=True)
@@ -118,7 +121,11 @@ def judge(limit: Limit, values: npt.ArrayLike, estimate: BatchMean, settings: Qc
         return _undecided(limit, x.size, f"{images} of at least {settings.min_images} pictures", value, low, high)
     if not (math.isfinite(value) and not math.isnan(low) and not math.isnan(high)):
         return _undecided(limit, x.size, "too few particles for an interval", value, low, high)
-    return _decide(limit, value, low, high, int(x.size))
+    made = _decide(limit, value, low, high, int(x.size))
+    if limit.on == "share_outside" and made.outcome == "not_decided":
+        effective = _effective(x, estimate)
+        return replace(made, further=_further_for_share(limit, value, x.size, effective / x.size, settings.level))
+    return made
 
 
 def overall(outcomes: Sequence[Outcome]) -> Outcome:
@@ -155,6 +162,22 @@ def _further(value: float, low: float, high: float, bottom: float, top: float, n
             return None
         need = max(need, (reach / room) ** 2)
     return max(1, math.ceil(n * (need - 1))) if need > 1 else None
+
+
+def _further_for_share(limit: Limit, share: float, n: int, effect: float, level: float) -> int | None:
+    """Particles until the Clopper–Pearson interval of this share clears the largest share: found by halving."""
+
+    def decided(m: int) -> bool:
+        low, high = clopper_pearson_interval(share * m * effect, m * effect, level=level)
+        return high <= limit.max_share or low > limit.max_share
+
+    if not decided(_MOST_FURTHER):
+        return None
+    few, many = n, _MOST_FURTHER
+    while many - few > 1:
+        middle = (few + many) // 2
+        few, many = (few, middle) if decided(middle) else (middle, many)
+    return many - n
 
 
 def _bounds(limit: Limit) -> tuple[float, float]:

@@ -20,7 +20,7 @@ from poroscan.report.regime import advice_answer, regime_answer
 from poroscan.report.settings import ReportSettings
 from poroscan.report.source import Key, RunData, curve_units, read_curves
 from poroscan.report.toml_text import toml_text
-from poroscan.report.trend_view import TrendView
+from poroscan.report.trend_view import TrendSection
 from poroscan.report.verdicts import VERDICT_WORDS, distribution_figures, limit_lines, verdict_answer
 
 Row = Mapping[str, Any]
@@ -72,7 +72,7 @@ class _Shown:
     units: Units
 
 
-def report_content(data: RunData, *, trends: Sequence[TrendView] | None = None) -> dict[str, Any]:
+def report_content(data: RunData, *, trends: TrendSection | None = None) -> dict[str, Any]:
     """Everything the report says.
 
     Parameters
@@ -105,7 +105,9 @@ def report_content(data: RunData, *, trends: Sequence[TrendView] | None = None) 
         "glance": [_glance(number, row, by_batch) for number, row in enumerate(data.batches, start=1)],
         "comparison": list(batch_comparison(data.batches)) if len(data.batches) > 1 else [],
         "batches": [_batch(number, row, by_batch, shown) for number, row in enumerate(data.batches, start=1)],
-        "trends": list(trends or []),
+        "trends": list(trends.views) if trends else [],
+        "trend_rules": "; ".join(trends.rules) if trends else "",
+        "trend_table": {"heads": trends.heads if trends else (), "rows": trends.rows if trends else ()},
         "no_trend": "" if trends else NO_LEDGER,
         "left_out": list(_left_out(data)),
         "not_shown": len(rows) - len(kept),

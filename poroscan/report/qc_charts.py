@@ -20,6 +20,8 @@ Array = npt.NDArray[np.float64]
 
 _LEFT, _RIGHT, _TOP, _BOTTOM = 46.0, 12.0, 20.0, 36.0
 _MOST_BARS = 24
+#: Names of the shapes of marks, in their order.
+SHAPE_NAMES = ("circle", "square", "triangle", "diamond")
 #: Shapes of marks, one per instrument; ``{r}`` is the radius.
 _SHAPES = (
     "M{x0} {y}a{r} {r} 0 1 0 {d} 0a{r} {r} 0 1 0 -{d} 0",
@@ -153,7 +155,15 @@ def _value_axis(panel: _Panel, x_label: str, height: float) -> Iterator[str]:
     yield text(panel.right, height - 5, x_label, anchor="end", fill=INK)
 
 
-def control_chart(trend: Trend, *, y_label: str, label: str, current: Sequence[str] = (), width: int = 560) -> Markup:
+def control_chart(
+    trend: Trend,
+    *,
+    y_label: str,
+    label: str,
+    current: Sequence[str] = (),
+    numbers: Sequence[int] | None = None,
+    width: int = 560,
+) -> Markup:
     """Individuals chart over its moving-range chart.
 
     Parameters
@@ -166,6 +176,8 @@ def control_chart(trend: Trend, *, y_label: str, label: str, current: Sequence[s
         What the chart shows, for those who cannot see it.
     current
         Names of the batches of this run, whose marks are filled.
+    numbers
+        Number of each batch, as the axis shows it; None counts from 1.
     width
         Width in units of the page's pixels.
     """
@@ -193,7 +205,7 @@ def control_chart(trend: Trend, *, y_label: str, label: str, current: Sequence[s
         path = " ".join(f"{lower.x(i + 1):.1f} {lower.y(v):.1f}" for i, v in enumerate(trend.chart.moving_range))
         body.append(f'<path d="M{path}" fill="none" stroke="{BLUE}" stroke-width="1.5"/>')
         bottom = 280.0
-    body += _batch_axis(upper, last, bottom)
+    body += _batch_axis(upper, list(numbers or range(1, last + 2)), bottom)
     return element(body, label=label, size=(width, int(bottom + 16)))
 
 
@@ -236,10 +248,10 @@ def _reference(panel: _Panel, value: float, word: str, dash: str) -> Iterator[st
     yield text(panel.right + 4, y + 3.5, word, fill=INK)
 
 
-def _batch_axis(panel: _Panel, last: int, y: float) -> Iterator[str]:
-    step = max(1, math.ceil((last + 1) / 12))
-    for i in range(0, last + 1, step):
-        yield text(panel.x(i), y, str(i + 1), anchor="middle")
+def _batch_axis(panel: _Panel, numbers: Sequence[int], y: float) -> Iterator[str]:
+    step = max(1, math.ceil(len(numbers) / 12))
+    for i in range(0, len(numbers), step):
+        yield text(panel.x(i), y, str(numbers[i]), anchor="middle")
     yield text(panel.right, y + 13, "batch, in order of time", anchor="end", fill=INK)
 
 

@@ -13,11 +13,10 @@ from poroscan.qc.assess import BatchAssessment, LimitResult
 from poroscan.qc.limits import Outcome, Verdict
 from poroscan.qc.regime_check import RegimeVerdict
 from poroscan.qc.settings import Limit
-from poroscan.quantities import by_key
 from poroscan.report.numbers import UNDEFINED, interval, plain
 from poroscan.report.qc_charts import distribution_chart
 from poroscan.report.regime import regime_words
-from poroscan.report.words import count
+from poroscan.report.words import count, labelled
 
 VERDICT_WORDS: Mapping[Outcome, str] = MappingProxyType(
     {"within": "within limits", "outside": "outside limits", "not_decided": "not decided"}
@@ -133,9 +132,11 @@ def distribution_figures(assessment: BatchAssessment) -> Iterator[tuple[str, Mar
             None,
         )  # fmt: skip
         ends = (mean.value, mean.low, mean.high) if mean else (s.mean.mean, math.nan, math.nan)
-        label = f"{_label(limit.quantity)} of {count(s.values.size, 'particle')} against {_limits_of_particles(limit)}"
+        label = (
+            f"{labelled(limit.quantity)} of {count(s.values.size, 'particle')} against {_limits_of_particles(limit)}"
+        )
         yield label, distribution_chart(
-            s.values, limits=(limit.low, limit.high), mean=ends, x_label=_label(limit.quantity),
+            s.values, limits=(limit.low, limit.high), mean=ends, x_label=labelled(limit.quantity),
             label=f"{label}; {_share(result)}",
         )  # fmt: skip
 
@@ -157,13 +158,7 @@ def _what(limit: Limit) -> str:
         "percentile": f"{limit.percentile:g}th percentile of the particles",
         "share_outside": "share of particles outside",
     }[limit.on]
-    return f"{_label(limit.quantity)}, {of}"
-
-
-def _label(key: str) -> str:
-    q = by_key(key)
-    unit = q.unit_words.replace("µm", "px") if key == q.pixel_key else q.unit_words
-    return f"{q.label} ({unit})" if unit else q.label
+    return f"{labelled(limit.quantity)}, {of}"
 
 
 def _limits(limit: Limit) -> str:

@@ -86,6 +86,24 @@ def parted(text: str) -> tuple[str, str]:
     return value, ends.removesuffix(")")
 
 
+def labelled(key: str) -> str:
+    """Label of a quantity with the unit of its column.
+
+    Parameters
+    ----------
+    key
+        Column in micrometres or pixels.
+
+    Examples
+    --------
+    >>> labelled("pore_d50_px")
+    'Pore D50 (px)'
+    """
+    q = by_key(key)
+    unit = pixel_unit(q) if key == q.pixel_key else q.unit_words
+    return f"{q.label} ({unit})" if unit else q.label
+
+
 def in_words(pattern: str, row: Row, key: str) -> str:
     """A sentence around a length, with its interval at the end; empty where the length is undefined.
 

@@ -129,3 +129,11 @@ def test_settings_say_what_is_wrong() -> None:
         Limit("porosity", low=0, max_share=5)
     with pytest.raises(SettingsError, match="unknown regime 'fast'"):
         check_limits(QcSettings(regime="fast"), regimes=("delayed",))
+
+
+def test_a_share_of_nothing_needs_as_many_as_the_exact_interval_says() -> None:
+    """None of n outside: the upper end is 1 − 0.025^(1/n), at most 0.05 from n = 72 on (Clopper and Pearson 1934)."""
+    x = np.full(10, 5.0) + np.tile([0.1, -0.1], 5)
+    v = judge(Limit("pore_d50_um", high=9.0, on="share_outside"), x, _mean(x), SETTINGS, images=10)
+    assert (v.outcome, v.further) == ("not_decided", 62)
+    assert 1 - 0.025 ** (1 / 72) <= 0.05 < 1 - 0.025 ** (1 / 71)
