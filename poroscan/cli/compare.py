@@ -114,7 +114,7 @@ def _write(path: Path, rows: list[dict[str, Any]]) -> None:
     try:
         pd.DataFrame(rows).to_csv(path, index=False)
     except OSError as error:
-        raise StoreError(f"{path}: cannot be written ({error.strerror or error})") from error
+        raise StoreError(f"{path}: cannot be written ({error.strerror or error}); give another place") from error
 
 
 def _print(made: Comparison) -> None:
@@ -139,7 +139,8 @@ def _print(made: Comparison) -> None:
     console.print(table)
     console.print(
         Text(
-            "Particles count as nested in pictures. “Not shown to differ” does not mean “the same”: give --margin to test that."
+            "Particles count as nested in pictures. Each interval stands for itself; p and verdict take into account how many "
+            "comparisons were made (Holm). “Not shown to differ” does not mean “the same”: give --margin to test that."
         )
     )
 

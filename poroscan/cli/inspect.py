@@ -39,6 +39,8 @@ def command(
 
     if out is not None and out.suffix.lower() not in (".png", ".html"):
         raise SettingsError(f"--out must end in .png or .html, not {out.name!r}")
+    if out is not None and not out.parent.is_dir():  # said before a long folder is read
+        raise SettingsError(f"--out {out}: there is no folder {out.parent}; make it first")
     try:
         settings = IntakeSettings(
             pixel_size_um=pixel_size, scale_bar_um=scale_bar, banner=_banner(banner), page=page, ocr=ocr

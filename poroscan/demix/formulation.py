@@ -162,9 +162,9 @@ def load_formulation(path: str | Path) -> Formulation:
     try:
         table = tomllib.loads(path.read_bytes().decode("utf-8"))
     except OSError as error:
-        raise InputError(f"{path}: cannot be read ({error.strerror or error})") from error
+        raise InputError(f"{path}: cannot be read ({error.strerror or error}); check its name") from error
     except (UnicodeDecodeError, tomllib.TOMLDecodeError) as error:
-        raise InputError(f"{path}: is not a TOML file ({error})") from error
+        raise InputError(f"{path}: is not a TOML file ({error}); give a formulation") from error
     try:
         return formulation_from_table(table)
     except SettingsError as error:

@@ -8,7 +8,7 @@ they are continued off the composition triangle.
 from __future__ import annotations
 
 import math
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from typing import Any, Protocol, runtime_checkable
 
@@ -92,6 +92,10 @@ class SharePolynomial:
         if not self.coefficients or not all(math.isfinite(c) for c in self.coefficients):
             raise ValueError(f"coefficients must be one or more finite numbers, got {self.coefficients!r}")
 
+    def __str__(self) -> str:
+        powers = ["", " u", *(f" u^{k}" for k in range(2, len(self.coefficients)))]
+        return _scaled(_sum_in_words(self.coefficients, powers), self.scale)
+
     def value(self, phi_n: FloatArray, phi_s: FloatArray, phi_p: FloatArray) -> FloatArray:
         """Parameter at the given volume fractions."""
         return self.scale * np.polynomial.Polynomial(self.coefficients)(_share(phi_n, phi_s))
@@ -129,6 +133,10 @@ class ShareRational:
         if not all(math.isfinite(x) for x in (self.a, self.b, self.c)) or self.c >= 1:
             raise ValueError(f"a, b, c must be finite and c below 1, got a={self.a}, b={self.b}, c={self.c}")
 
+    def __str__(self) -> str:
+        pole = _sum_in_words((1.0, -self.c), ("", " u"))
+        return _scaled(_sum_in_words((self.a, self.b), ("", f"/({pole})")), self.scale)
+
     def value(self, phi_n: FloatArray, phi_s: FloatArray, phi_p: FloatArray) -> FloatArray:
         """Parameter at the given volume fractions."""
         return self.scale * (self.a + self.b / (1 - self.c * _share(phi_n, phi_s)))
@@ -144,6 +152,16 @@ class ShareRational:
     def _slope(self, phi_n: FloatArray, phi_s: FloatArray, order: int) -> FloatArray:
         inverse = 1 / (1 - self.c * _share(phi_n, phi_s))
         return self.scale * self.b * math.factorial(order) * self.c**order * inverse ** (order + 1)
+
+
+def _sum_in_words(numbers: Sequence[float], factors: Sequence[str]) -> str:
+    first, *rest = (f"{abs(n):g}{factor}" for n, factor in zip(numbers, factors, strict=False))
+    signs = ["−" if n < 0 else "+" for n in numbers]
+    return ("−" if numbers[0] < 0 else "") + first + "".join(f" {s} {t}" for s, t in zip(signs[1:], rest, strict=True))
+
+
+def _scaled(words: str, scale: float) -> str:
+    return words if scale == 1 else f"{scale:g} ({words})"
 
 
 def _liquid(phi_n: FloatArray, phi_s: FloatArray) -> FloatArray:

@@ -275,6 +275,11 @@ def _tangent_axes(root: FloatArray) -> tuple[FloatArray, FloatArray]:
     return first, second
 
 
+def params_in_words(mixture: Mixture) -> dict[str, Any]:
+    """Sizes and parameters for people: numbers, and functions of the solvent's share of the liquid u as formulas."""
+    return {k: v if isinstance(v, float) else str(getattr(mixture, k)) for k, v in params_of(mixture).items()}
+
+
 def params_of(mixture: Mixture) -> dict[str, Any]:
     """Sizes and parameters as plain values for tables and fingerprints (functions as their ``repr``)."""
     names = ("N_p", "N_s", "N_n", "chi_pn", "chi_ps", "chi_sn")

@@ -11,6 +11,7 @@ from poroscan.demix.equilibrium import potential_gap
 from poroscan.demix.formulation import Composition, Formulation
 from poroscan.demix.interaction import FloatArray
 from poroscan.demix.mixing_line import Crossing, line_crossings
+from poroscan.demix.mixture import params_in_words
 from poroscan.demix.phase_diagram import PhaseDiagram
 from poroscan.demix.region import Region
 
@@ -40,7 +41,8 @@ def summarise(diagram: PhaseDiagram, formulation: Formulation, *, tie_lines: int
     dope, bath = as_array(formulation.dope), as_array(formulation.bath)
     exchanged = np.array([dope[0] + dope[1], 0.0, dope[2]])
     return {
-        "formulation": {k: v for k, v in formulation.describe().items() if k != "simulation"},
+        "formulation": {k: v for k, v in formulation.describe().items() if k != "simulation"}
+        | {"mixture": params_in_words(formulation.mixture)},
         "binodal_area": round(diagram.binodal_area, 5),
         "spinodal_area": round(diagram.spinodal_area, 5),
         "plait_points": [{**_named(plait.phi), "stable": plait.stable} for plait in diagram.plaits],
@@ -151,6 +153,8 @@ def in_words(summary: dict[str, Any]) -> str:
     for triangle in summary["three_phase_triangles"]:
         lines += ["", "Three-phase triangle"]
         lines += [f"  {_fractions(phase)}" for phase in triangle["phases"]]
+    if any(isinstance(v, str) for v in mixture.values()):
+        lines.insert(3, "u is the solvent's share of the liquid, solvent / (solvent + non-solvent)")
     lines += ["", f"Dope: {_fractions(summary['dope'])}: {summary['dope']['state']}"]
     lines.append(f"Bath: {_fractions(summary['bath'])}: {summary['bath']['state']}")
     lines += ["", "Mixing line (dope to bath)", *_crossing_lines(summary["mixing_line"], "of bath")]

@@ -24,9 +24,15 @@ def check_keys(table: Mapping[str, Any], known: Iterable[str], *, where: str) ->
     known = list(known)
     for key in table:
         if key not in known:
-            near = difflib.get_close_matches(key, known, n=1, cutoff=0.5)
-            hint = f"did you mean {near[0]!r}?" if near else f"known are {', '.join(known)}"
+            near = _nearest(key, known)
+            hint = f"did you mean {near!r}?" if near else f"known are {', '.join(known)}"
             raise SettingsError(f"{where}: unknown key {key!r}; {hint}")
+
+
+def _nearest(key: str, known: list[str]) -> str | None:
+    """The known key most like ``key``: one of the same letters before all others (``chi_np`` is ``chi_pn``)."""
+    near = difflib.get_close_matches(key, known, n=len(known) or 1, cutoff=0.5)
+    return next((k for k in near if sorted(k) == sorted(key)), near[0] if near else None)
 
 
 def read_settings(cls: type[Settings], table: Mapping[str, Any], *, where: str) -> Settings:

@@ -75,7 +75,7 @@ def read_scale_bar(
         labelled = next(
             (bar for bar in bars if bar in found and math.isclose(found[bar][0], stated_um, rel_tol=0.02)), None
         )
-        return _reading(labelled or bars[0], stated_um, "as stated", doubtful=False)
+        return _reading(labelled or bars[0], stated_um, "", doubtful=False)
     for bar, (um, text, box) in found.items():
         return _reading(bar, um, text, doubtful=box.height < LEAST_LETTER_HEIGHT)
     bar = bars[0]
@@ -129,7 +129,8 @@ def _crop(values: npt.NDArray[np.float32], box: Box, bar: ScaleBar) -> npt.NDArr
 
 def _reading(bar: ScaleBar, um: float, text: str, *, doubtful: bool) -> BarReading:
     size = um / bar.length
-    words = f"scale bar ({bar.length:.1f} pixels, label {text!r} = {um:g} µm)"
+    said = f"label {text!r} = {um:g} µm" if text else f"stated as {um:g} µm"
+    words = f"scale bar ({bar.length:.1f} pixels, {said})"
     candidate = Candidate(size, "scale_bar", words, relative_uncertainty=bar.length_sd / bar.length, doubtful=doubtful)
     notes = () if not doubtful else ("the letters of the scale bar are under 14 pixels high; check the length",)
     if not math.isfinite(size):

@@ -11,7 +11,7 @@ from pathlib import Path
 import numpy as np
 import numpy.typing as npt
 
-from poroscan.errors import InputError
+from poroscan.errors import SettingsError
 from poroscan.intake.files import shown
 from poroscan.intake.inspection import THUMBNAIL, Inspected, InspectedRow
 from poroscan.quantities import FLAGS
@@ -43,8 +43,8 @@ def write_sheet(found: Inspected, path: Path) -> None:
 
     Raises
     ------
-    InputError
-        If the file cannot be written.
+    SettingsError
+        If the file cannot be written there.
     """
     data = sheet_html(found).encode() if path.suffix.lower() == ".html" else sheet_png(found)
     part = path.with_name(f".{path.name}.part")
@@ -52,7 +52,7 @@ def write_sheet(found: Inspected, path: Path) -> None:
         part.write_bytes(data)
         os.replace(part, path)
     except OSError as error:
-        raise InputError(f"{shown(path)}: cannot be written ({error.strerror}); choose another place") from None
+        raise SettingsError(f"{shown(path)}: cannot be written ({error.strerror}); choose another place") from None
 
 
 def caption(row: InspectedRow) -> list[str]:

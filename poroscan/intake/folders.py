@@ -160,6 +160,8 @@ def list_inputs(folder: str | os.PathLike[str], *, skip: Iterable[Path] = ()) ->
         if not top.exists():
             raise bad_input(top, "does not exist", "check the name of the folder")
         raise bad_input(top, "is not a folder", "give the folder that holds the pictures")
+    if (top / "run.json").is_file():
+        raise bad_input(top, "is a run folder, written by a scan", "give the folder that holds the pictures")
     problems: list[Problem] = []
     tables: list[Path] = []
     found = _Walk(top, {p.resolve() for p in skip}, problems, tables).run()

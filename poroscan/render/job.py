@@ -6,7 +6,7 @@ import csv
 from collections.abc import Mapping
 from pathlib import Path
 
-from poroscan.errors import SettingsError
+from poroscan.errors import SettingsError, StoreError
 from poroscan.render.reading import Masks
 from poroscan.render.sem import Rendered, render_section
 from poroscan.render.settings import RenderSettings, look
@@ -32,7 +32,7 @@ def settings_from(name: str, changes: Mapping[str, str]) -> RenderSettings:
     try:
         return look(name, **values)
     except ValueError as error:
-        raise SettingsError(str(error)) from None
+        raise SettingsError(str(error).removeprefix("RenderSettings.")) from None
 
 
 def _value(key: str, text: str) -> object:
@@ -87,11 +87,23 @@ def render_to(
     ------
     SettingsError
         If a scale bar is asked for and the scale is not known.
+    StoreError
+        If the folder or a file in it cannot be written.
     """
     if not scale_known and settings.bar != "none":
         raise SettingsError("a scale bar needs a pixel size; give --pixel-size")
     scale = scale if scale_known else "none"
     rendered = render_section(masks.pores, masks.particle, settings, rng=seed, depth=masks.depth)
+    try:
+        files = _write_all(folder, name, rendered, settings, scale=scale, jpeg=jpeg, lengths=scale_known)
+    except OSError as error:
+        raise StoreError(f"{folder}: cannot be written ({error.strerror or error}); give another folder") from error
+    return rendered, files
+
+
+def _write_all(
+    folder: Path, name: str, rendered: Rendered, settings: RenderSettings, *, scale: Scale, jpeg: bool, lengths: bool
+) -> tuple[Path, ...]:
     folder.mkdir(parents=True, exist_ok=True)
     picture = folder / f"{name}.{'jpg' if jpeg else 'tif'}"
     if jpeg:
@@ -99,9 +111,9 @@ def render_to(
     else:
         write_tiff(picture, rendered.grey, pixel_size_um=settings.pixel_size_um, scale=scale)
     table = folder / f"{name}_truth.csv"
-    _write_truth(table, rendered, lengths=scale_known)
-    mask_files = write_masks(folder, name, rendered, scale="ome" if scale_known else "none")
-    return rendered, (picture, *mask_files, table)
+    _write_truth(table, rendered, lengths=lengths)
+    mask_files = write_masks(folder, name, rendered, scale="ome" if lengths else "none")
+    return picture, *mask_files, table
 
 
 def _write_truth(path: Path, rendered: Rendered, *, lengths: bool) -> None:

@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+import json
+from collections import Counter
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -16,6 +17,7 @@ from poroscan.intake.settings import IntakeSettings
 from poroscan.section import BoolArray
 from poroscan.segment.scoring import Score, score_masks
 
+_LABELS = "labels.ome.tif"
 _SUFFIXES = (".png", ".tif", ".tiff", ".bmp")
 
 
@@ -33,9 +35,10 @@ def score_folders(found: Path, truth: Path) -> tuple[NamedScore, ...]:
     Parameters
     ----------
     found
-        Run folder (``images/NAME/labels.ome.tif``) or a folder of ``NAME_pores`` and, as far as drawn, ``NAME_particles`` masks.
+        Run folder, or a folder of ``NAME_pores`` and, as far as drawn, ``NAME_particles`` masks, sub-folders included.
     truth
         Folder of drawn masks ``NAME_pores.png`` and, as far as drawn, ``NAME_particles.png``; NAME with or without the picture's suffix.
+        Masks lie in sub-folders named like the batches, or, where no two pictures share a name, in the folder itself.
 
     Returns
     -------
@@ -50,13 +53,16 @@ def score_folders(found: Path, truth: Path) -> tuple[NamedScore, ...]:
     for folder in (found, truth):
         if not folder.is_dir():
             raise InputError(f"{folder}: no such folder; give a run folder and a folder of drawn masks")
+    listed = _listed(found)
+    stems = Counter(_bare(name) for name, _ in listed)
     scores = []
-    for name, pores, particles in sorted(_found(found), key=lambda item: item[0]):
-        drawn = _mask_file(truth, name, "pores")
+    for name, file in listed:
+        anywhere = stems[_bare(name)] == 1  # a mask that lies in no batch's folder must not stand for two pictures
+        drawn = _mask_file(truth, name, "pores", anywhere=anywhere)
         if drawn is None:
             continue
-        outline = _mask_file(truth, name, "particles")
-        scores.append(NamedScore(name, _score(name, pores, particles, drawn, outline)))
+        outline = _mask_file(truth, name, "particles", anywhere=anywhere)
+        scores.append(NamedScore(name, _score(name, *_found_masks(file), drawn, outline)))
     if not scores:
         raise InputError(f"{truth}: no NAME_pores.png for any picture of {found}; name drawn masks after the pictures")
     return tuple(scores)
@@ -74,31 +80,53 @@ def _score(name: str, pores: BoolArray, particles: BoolArray | None, drawn: Path
         raise InputError(f"{name}: {error}") from error
 
 
-def _found(folder: Path) -> Iterator[tuple[str, BoolArray, BoolArray | None]]:
+def _listed(folder: Path) -> list[tuple[str, Path]]:
+    """Names of pictures (``BATCH/IMAGE`` where a run says so), sorted, and the file that holds what was found in each."""
+    if (folder / "run.json").is_file():
+        pairs = [(name, folder / inner / _LABELS) for name, inner in _pictures_of_run(folder / "run.json")]
+        return sorted((name, file) for name, file in pairs if file.is_file())
     if (folder / "images").is_dir():
         images = folder / "images"
-        for file in sorted(images.rglob("labels.ome.tif")):
-            planes = _planes(file)
-            if planes.ndim != 3 or planes.shape[0] < 2:
-                raise InputError(
-                    f"{file}: expected two planes (particles, pores), not shape {planes.shape}; run the scan again"
-                )
-            labels = np.asarray(planes, dtype=np.int64)
-            yield file.parent.relative_to(images).as_posix(), labels[1] > 0, labels[0] > 0
-        return
-    for file in sorted(folder.iterdir()):
-        if file.stem.endswith("_pores") and file.suffix.lower() in _SUFFIXES:
-            name = file.stem.removesuffix("_pores")
-            outline = _mask_file(folder, name, "particles")
-            yield name, read_mask(file), None if outline is None else read_mask(outline)
+        return sorted((f.parent.relative_to(images).as_posix(), f) for f in images.rglob(_LABELS))
+    masks = (f for f in folder.rglob("*_pores.*") if f.stem.endswith("_pores") and f.suffix.lower() in _SUFFIXES)
+    return sorted((f.relative_to(folder).with_name(f.stem.removesuffix("_pores")).as_posix(), f) for f in masks)
 
 
-def _mask_file(folder: Path, name: str, kind: str) -> Path | None:
-    last = name.rsplit("/", 1)[-1]
-    stems = dict.fromkeys((name, last, str(Path(name).with_suffix("")), Path(last).stem))
-    for stem in stems:
+def _pictures_of_run(path: Path) -> list[tuple[str, str]]:
+    try:
+        inputs = json.loads(path.read_text(encoding="utf-8"))["inputs"]
+        return [(f"{i['batch']}/{i['image']}", i["folder"]) for i in inputs if i.get("folder")]
+    except (OSError, ValueError, KeyError, TypeError) as error:
+        raise InputError(f"{path}: is no record of a run ({error}); run the scan again") from error
+
+
+def _found_masks(file: Path) -> tuple[BoolArray, BoolArray | None]:
+    """Pores and, where they are known, particles."""
+    if file.name == _LABELS:
+        planes = _planes(file)
+        if planes.ndim != 3 or planes.shape[0] < 2:
+            raise InputError(
+                f"{file}: expected two planes (particles, pores), not shape {planes.shape}; run the scan again"
+            )
+        return planes[1] > 0, planes[0] > 0
+    outline = _mask_file(file.parent, file.stem.removesuffix("_pores"), "particles")
+    return read_mask(file), None if outline is None else read_mask(outline)
+
+
+def _bare(name: str) -> str:
+    return Path(name.rsplit("/", 1)[-1]).stem
+
+
+def _mask_file(folder: Path, name: str, kind: str, *, anywhere: bool = True) -> Path | None:
+    """Mask of a picture: below the folder of its batch, or, where that cannot be mistaken, right in the folder."""
+    head, _, last = name.rpartition("/")
+    here = folder / head
+    places = [(here, last), (here, Path(last).stem)]
+    if anywhere:
+        places += [(folder, last), (folder, Path(last).stem)]
+    for place, stem in places:
         for suffix in _SUFFIXES:
-            file = folder / f"{stem}_{kind}{suffix}"
+            file = place / f"{stem}_{kind}{suffix}"
             if file.is_file():
                 return file
     return None

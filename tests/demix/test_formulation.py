@@ -10,9 +10,9 @@ from typing import Any, Literal
 import pytest
 
 from poroscan.demix.formulation import Composition, Formulation, formulation_from_table, load_formulation
-from poroscan.demix.interaction import ShareRational
+from poroscan.demix.interaction import SharePolynomial, ShareRational
 from poroscan.demix.mixture import Mixture
-from poroscan.demix.settings_table import read_settings
+from poroscan.demix.settings_table import check_keys, read_settings
 from poroscan.errors import InputError, SettingsError
 
 TABLE: dict[str, Any] = {
@@ -201,3 +201,16 @@ def test_kinds_of_values(table: dict[str, Any], words: str) -> None:
 def test_values_are_converted() -> None:
     table = {"size": 2, "count": 3, "on": True, "kind": "b", "many": [1, 2.5], "maybe": 4, "label": "x"}
     assert read_settings(_Settings, table, where="[x]") == _Settings(2.0, 3, True, "b", (1.0, 2.5), 4.0, "x")
+
+
+def test_a_swapped_letter_is_told_from_a_wrong_one() -> None:
+    """chi_np is as near to chi_sn as to chi_pn by edits, but has the letters of chi_pn."""
+    with pytest.raises(SettingsError, match="unknown key 'chi_np'; did you mean 'chi_pn'"):
+        check_keys({"chi_np": 1.0}, ["chi_sn", "chi_ps", "chi_pn"], where="[interactions]")
+
+
+def test_parameters_in_words() -> None:
+    assert str(ShareRational(0.661, 0.417, 0.755)) == "0.661 + 0.417/(1 − 0.755 u)"
+    assert str(ShareRational(0.5, -0.25, -0.5, scale=2.0)) == "2 (0.5 − 0.25/(1 + 0.5 u))"
+    assert str(SharePolynomial((0.5, 0.04, 0.8, -1.2))) == "0.5 + 0.04 u + 0.8 u^2 − 1.2 u^3"
+    assert str(SharePolynomial((-0.5,))) == "−0.5"

@@ -72,3 +72,20 @@ def test_one_picture_and_an_empty_folder(folder: Path, tmp_path: Path, capsys: p
     (tmp_path / "empty").mkdir()
     assert main(["inspect", str(tmp_path / "empty")]) == 3
     assert "holds no picture" in capsys.readouterr().err
+
+
+def test_a_run_folder_is_no_folder_of_pictures(folder: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    """Its overlays would pass for pictures."""
+    (folder / "run.json").write_text("{}", encoding="utf-8")
+    for words in (["inspect", str(folder)], ["scan", str(folder), "--out", str(folder.parent / "run")]):
+        assert main(words) == 3
+        assert "is a run folder, written by a scan; give the folder that holds the pictures" in capsys.readouterr().err
+
+
+def test_a_sheet_without_a_place_is_said_before_anything_is_read(
+    folder: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    assert main(["inspect", str(folder), "--out", str(folder / "none" / "sheet.html")]) == 2
+    said = capsys.readouterr()
+    assert "there is no folder" in said.err
+    assert said.out == ""

@@ -9,7 +9,7 @@ import tifffile
 from PIL import Image
 
 from poroscan.cli.render import command
-from poroscan.errors import InputError, SettingsError
+from poroscan.errors import InputError, SettingsError, StoreError
 from poroscan.render.bodies import make_body
 from poroscan.render.job import settings_from
 from poroscan.render.reading import read_masks
@@ -137,7 +137,7 @@ def test_arrays_that_are_no_masks_are_refused(tmp_path: Path) -> None:
     [
         ("secondary", {"dose": "many"}, "dose is 'many'; give a number"),
         ("secondary", {"shine": "1"}, "unknown render settings"),
-        ("secondary", {"blur": "-1"}, "blur must be at least 0"),
+        ("secondary", {"blur": "-1"}, "^blur must be at least 0"),
         ("x", {}, "unknown look"),
     ],
 )
@@ -151,3 +151,10 @@ def test_wrong_options_are_one_line(masks: Path, tmp_path: Path) -> None:
         command(masks, tmp_path, change=["dose"])
     with pytest.raises(SettingsError, match="--scale is 'inch'"):
         command(masks, tmp_path, scale="inch")
+
+
+def test_a_file_in_place_of_the_folder_is_one_line(masks: Path, tmp_path: Path) -> None:
+    file = tmp_path / "taken"
+    file.write_text("x", encoding="utf-8")
+    with pytest.raises(StoreError, match=r"taken: cannot be written .*; give another folder"):
+        command(masks, file)

@@ -102,3 +102,28 @@ def test_score_command_names_what_is_wrong(folders: tuple[Path, Path], capsys: p
     (truth / "a_pores.png").unlink()
     assert main(["score", str(run), str(truth)]) == 3
     assert "name drawn masks after the pictures" in capsys.readouterr().err
+
+
+def test_score_of_a_run_finds_masks_by_batch(folders: tuple[Path, Path], capsys: pytest.CaptureFixture[str]) -> None:
+    """A run names the folder of each picture itself; two batches hold a picture of the same name, one of them drawn."""
+    run, truth = folders
+    labels = (run / "images" / "a.tif" / "labels.ome.tif").read_bytes()
+    inputs = []
+    for batch in ("lot 1", "lot 2"):
+        inner = run / "images" / f"{batch}__a"
+        inner.mkdir()
+        (inner / "labels.ome.tif").write_bytes(labels)
+        inputs.append({"batch": batch, "image": "a.tif", "folder": f"images/{batch}__a", "outcome": "measured"})
+    (run / "run.json").write_text(json.dumps({"inputs": inputs}), encoding="utf-8")
+    (truth / "lot 2").mkdir()
+    (truth / "a_pores.png").rename(truth / "lot 2" / "a_pores.png")
+    assert main(["score", str(run), str(truth), "--json"]) == 0
+    (row,) = json.loads(capsys.readouterr().out)["pictures"]
+    assert row["image"] == "lot 2/a.tif"
+    assert row["pore_dice"] == 1.0
+    (truth / "lot 2" / "a_pores.png").rename(truth / "a_pores.png")  # for which of the two?
+    assert main(["score", str(run), str(truth)]) == 3
+    assert "name drawn masks after the pictures" in capsys.readouterr().err
+    (run / "run.json").write_text("{}", encoding="utf-8")
+    assert main(["score", str(run), str(truth)]) == 3
+    assert "run.json: is no record of a run" in capsys.readouterr().err
