@@ -13,7 +13,7 @@ import math
 import os
 import traceback
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from pathlib import Path
 from typing import Any, Literal
 
@@ -24,7 +24,7 @@ import tifffile
 
 from poroscan import __version__
 from poroscan.batch.recipe import Recipe
-from poroscan.batch.regimes import RegimeResult, atlas_key, regime_of
+from poroscan.batch.regimes import SHOWN, RegimeResult, atlas_key, look_alike, regime_of
 from poroscan.batch.store import FORMAT, RunFolder
 from poroscan.batch.tables import CURVE_SCHEMA, curve_table, parquet_bytes, particle_columns, pore_schema, pore_table
 from poroscan.errors import InputError, MissingExtraError, StoreError
@@ -45,6 +45,8 @@ Outcome = Literal["measured", "no_particle", "unreadable", "failed", "lost"]
 
 #: Longer side of the small picture of a whole image.
 OVERVIEW_PX = 520
+#: Longer side of the picture of a simulated look-alike.
+LOOK_ALIKE_PX = 120
 
 #: Outcome -> what to do, where the reason itself does not say.
 REMEDIES: Mapping[str, str] = {
@@ -126,7 +128,8 @@ class ImageOutcome:
 class _Measured:
     picture: Picture
     segmentation: Segmentation
-    measurements: tuple[Measurement, ...] = field(default=())
+    measurements: tuple[Measurement, ...] = ()
+    regimes: tuple[RegimeResult, ...] = ()
 
 
 def process_image(task: ImageTask) -> ImageOutcome:
@@ -244,8 +247,14 @@ def _measured_files(task: ImageTask, sha256: str | None) -> dict[str, bytes]:
         measure_section(section, recipe.measure, rng=np.random.default_rng([seed, number]))
         for number, section in enumerate(segmentation.sections)
     )
-    found = _Measured(picture, segmentation, measurements)
-    files = {"image.json": _json_bytes(_entry(task, found, sha256))} | _pictures(task, found)
+    regimes = tuple(
+        regime_of(measurement, section.view)
+        for section, measurement in zip(segmentation.sections, measurements, strict=True)
+    )
+    found = _Measured(picture, segmentation, measurements, regimes)
+    files = (
+        {"image.json": _json_bytes(_entry(task, found, sha256))} | _pictures(task, found) | _look_alikes(task, found)
+    )
     return files | _tables(task, found) if measurements else files
 
 
@@ -309,6 +318,18 @@ def _pictures(task: ImageTask, found: _Measured) -> dict[str, bytes]:
     return files
 
 
+def _look_alikes(task: ImageTask, found: _Measured) -> dict[str, bytes]:
+    """Pictures of the simulated particles that look most like each particle."""
+    look = task.recipe.report
+    return {
+        f"particle-{number}-like-{rank}.webp": look_alike(
+            near["run"], longest=LOOK_ALIKE_PX, quality=look.picture_quality
+        )
+        for number, regime in enumerate(found.regimes, start=1)
+        for rank, near in enumerate((regime.match or {}).get("nearest", [])[:SHOWN], start=1)
+    }
+
+
 def label_tiff(segmentation: Segmentation, picture: Picture) -> bytes:
     """Particles and pores as OME-TIFF: plane 0 holds the particles' numbers, plane 1 is 1 in pores.
 
@@ -333,9 +354,10 @@ def label_tiff(segmentation: Segmentation, picture: Picture) -> bytes:
 
 def _entry(task: ImageTask, found: _Measured, sha256: str | None) -> dict[str, Any]:
     picture, segmentation = found.picture, found.segmentation
-    sections = list(zip(segmentation.sections, found.measurements, strict=True))
-    regimes = [regime_of(measurement, section.view) for section, measurement in sections]
-    rows = [_row(task, found, *pair, regime) for pair, regime in zip(sections, regimes, strict=True)]
+    rows = [
+        _row(task, found, *parts)
+        for parts in zip(segmentation.sections, found.measurements, found.regimes, strict=True)
+    ]
     entry = _empty_entry(task, sha256, "measured" if rows else "no_particle")
     threshold = segmentation.threshold
     entry |= {
@@ -353,7 +375,7 @@ def _entry(task: ImageTask, found: _Measured, sha256: str | None) -> dict[str, A
         "method": segmentation.method,
         "threshold": None if threshold is None else {"level": threshold.level, "uncertainty": threshold.uncertainty},
         "rows": rows or [_blank_row(task, entry["outcome"], picture)],
-        "matches": [regime.match for regime in regimes],
+        "matches": [regime.match for regime in found.regimes],
     }
     if not rows:
         entry |= {"reason": FLAGS["no_particle"].words, "remedy": REMEDIES["no_particle"]}

@@ -13,13 +13,21 @@ from collections.abc import Mapping, Sequence
 from dataclasses import asdict, dataclass
 from typing import Any
 
+import numpy as np
+
 from poroscan.atlas import BatchMatch, Match, Matcher, has_packaged, load_packaged, pool, what_to_change
 from poroscan.atlas.advice import CAUTION
 from poroscan.atlas.parameters import Interval
 from poroscan.atlas.store import PACKAGED
+from poroscan.atlas.views import masks
+from poroscan.errors import StoreError
 from poroscan.measure import Measurement
 from poroscan.measure.descriptors import descriptors
+from poroscan.report.picture import thumbnail
 
+#: Look-alikes kept of each particle, and the grey of pores and polymer in their pictures.
+SHOWN = 3
+_PORE_GREY, _POLYMER_GREY = 0.12, 0.6
 #: Columns of particles.csv that are filled here.
 COLUMNS = ("regime", "regime_probability", "regime_set", "atlas_distance")
 
@@ -66,6 +74,36 @@ def regime_of(measurement: Measurement, view: str) -> RegimeResult:
         "atlas_distance": _number(match.distance),
     }
     return RegimeResult(cells, match.flags, _plain(asdict(match)))
+
+
+@functools.cache
+def look_alike(run: str, *, longest: int, quality: int) -> bytes:
+    """Picture of a simulated particle in the style of a particle's own picture (WebP): same grey, outline and pores drawn.
+
+    Parameters
+    ----------
+    run
+        Name of the run in the packaged atlas.
+    longest
+        Longer side in pixels.
+    quality
+        Quality of the compression, 1…100.
+
+    Raises
+    ------
+    StoreError
+        If the atlas holds no such run.
+    """
+    matcher = _matcher()
+    if matcher is None:
+        raise StoreError("no atlas comes with this installation, so there is no simulated particle to show")
+    field = matcher.atlas.run(run).field
+    pores, particle = masks(field)
+    bath, rich = np.quantile(field, [0.01, 0.99])
+    grey = _PORE_GREY + (_POLYMER_GREY - _PORE_GREY) * (field - bath) / (rich - bath)
+    return thumbnail(
+        np.clip(grey, 0, 1).astype(np.float32), particle.astype(np.uint8), pores, longest=longest, quality=quality
+    )
 
 
 def pooled_cells(matches: Sequence[Mapping[str, Any]], *, wanted: str | None = None) -> dict[str, Any]:
