@@ -53,7 +53,8 @@ COMMANDS: tuple[str, ...] = (
 
 for _name in COMMANDS:
     _module = importlib.import_module(f"poroscan.cli.{_name}")
-    app.command(_name)(_module.command)
+    _sentence = " ".join((_module.command.__doc__ or "").split("\n\n")[0].split())
+    app.command(_name, short_help=_sentence)(_module.command)  # in full: the library would cut it at 45 characters
 
 
 def _version(wanted: bool) -> None:

@@ -19,6 +19,7 @@ def test_help_names_every_command(capsys: pytest.CaptureFixture[str]) -> None:
     assert main(["--help"]) == 0
     out = capsys.readouterr().out
     assert all(name in out for name in COMMANDS)
+    assert "..." not in out.split("Commands:")[1]  # what a command does is said in full
 
 
 @pytest.mark.parametrize("command", COMMANDS)
