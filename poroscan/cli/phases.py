@@ -30,7 +30,7 @@ def command(
     as_json: Annotated[bool, typer.Option("--json", help="Print the table as JSON.")] = False,
     quiet: Annotated[bool, typer.Option("--quiet", help="Say nothing but errors.")] = False,
 ) -> int:
-    """The ternary phase diagram, with the formulation and its bath on it."""
+    """Draw the ternary phase diagram, with the formulation and its bath on it."""
     if published:
         if formulation is not None:
             raise SettingsError("give either a formulation or --published-parameters, not both")
