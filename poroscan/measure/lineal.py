@@ -44,9 +44,12 @@ def runs(mask: BoolArray, *, axis: int) -> tuple[npt.NDArray[np.intp], npt.NDArr
     """
     lines = np.moveaxis(mask, axis, -1)
     n = lines.shape[-1]
-    padded = np.zeros((lines.size // n, n + 1), np.int8)
+    padded = np.zeros((lines.size // n, n + 1), dtype=bool)
     padded[:, :n] = lines.reshape(-1, n)
-    change = np.flatnonzero(np.diff(padded.ravel(), prepend=np.int8(0)))
+    flat = padded.ravel()
+    change = np.flatnonzero(flat[1:] != flat[:-1]) + 1
+    if flat[0]:
+        change = np.concatenate([[0], change])
     start, end = change[0::2], change[1::2]
     return start - start // (n + 1), end - start
 
@@ -122,7 +125,8 @@ def _length(phase: BoolArray, shared: Shared, path: Float) -> Estimate:
     num, den = np.zeros(n_blocks), np.zeros(n_blocks)
     for axis in range(phase.ndim):
         start, length = runs(phase, axis=axis)
-        block = np.moveaxis(shared.blocks, axis, -1).reshape(-1)[start]
+        blocks = np.moveaxis(shared.blocks, axis, -1)
+        block = blocks[np.unravel_index(start, blocks.shape)]
         num += np.bincount(block, length**2 / 2.0, n_blocks + 1)[1:]
         den += np.bincount(block, length.astype(np.float64), n_blocks + 1)[1:]
     ratio = block_ratio(num, den, inflation=shared.block_inflation, scale="log")

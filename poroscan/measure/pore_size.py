@@ -24,6 +24,7 @@ from poroscan.measure.distance import boundary_distance
 from poroscan.measure.part import Part, undefined
 from poroscan.measure.pore_table import equivalent_diameter, select
 from poroscan.measure.settings import MeasureSettings
+from poroscan.measure.tally import label_counts
 from poroscan.measure.uncertainty import block_quantile, block_ratio, estimate_of, threshold_sd
 from poroscan.quantities import Curve, Estimate
 from poroscan.section import BoolArray, Section
@@ -68,7 +69,7 @@ def body_diameters(pores: BoolArray, *, pixel_size: float, split_depth: float = 
         raise ValueError("pores must be a 2-D or 3-D bool array (use array.astype(bool))")
     distance = boundary_distance(pores)
     labels, n = split_bodies(pores, distance, split_depth=split_depth)
-    sizes = np.bincount(labels.ravel(), minlength=n + 1)[1:].astype(np.float64)
+    sizes = label_counts(labels, number=n + 1)[1:].astype(np.float64)
     return equivalent_diameter(sizes, ndim=pores.ndim) * pixel_size
 
 
@@ -81,9 +82,11 @@ def part(section: Section, settings: MeasureSettings, *, shared: Shared, rng: np
     estimates = {"pore_count": Estimate(float(diameter.size))}
     block = shared.blocks_of_bodies(table)
     number = np.where(table["touches_frame"], 0.5, 1.0)
-    pixels = np.bincount(shared.blocks.ravel(), minlength=shared.n_blocks)[1:]
     result = block_ratio(
-        np.bincount(block, number, shared.n_blocks)[1:], pixels, inflation=shared.block_inflation, scale="log"
+        np.bincount(block, number, shared.n_blocks)[1:],
+        shared.block_pixels,
+        inflation=shared.block_inflation,
+        scale="log",
     )
     estimates[density] = estimate_of(result, scale="log")
     if diameter.size == 0:

@@ -18,6 +18,7 @@ import numpy as np
 
 from poroscan.measure.part import Part
 from poroscan.measure.settings import MeasureSettings
+from poroscan.measure.tally import label_sums
 from poroscan.measure.uncertainty import BlockEstimate, block_ratio, estimate_of, threshold_sd
 from poroscan.quantities import Estimate
 from poroscan.section import Section
@@ -74,9 +75,7 @@ def _diameter(section: Section, n: int) -> Estimate:
 
 
 def _sampling(section: Section, shared: Shared) -> BlockEstimate:
-    pixels = np.bincount(shared.blocks.ravel(), minlength=shared.n_blocks)[1:]
-    pores = np.bincount(shared.blocks[section.pores], minlength=shared.n_blocks)[1:]
-    return block_ratio(pores, pixels, inflation=shared.block_inflation, scale="logit")
+    return block_ratio(shared.block_pores, shared.block_pixels, inflation=shared.block_inflation, scale="logit")
 
 
 def _porosity(section: Section, shared: Shared) -> Estimate:
@@ -106,9 +105,8 @@ def _from_grey(section: Section, shared: Shared) -> Estimate:
     pore, wall = float(np.median(pores)), float(np.median(walls))
     if not abs(pore - wall) > _LEAST_CONTRAST * (float(pores.std()) + float(walls.std())):
         return Estimate(math.nan)
-    share = (section.grey - np.float32(wall)) / np.float32(pore - wall)
-    totals = np.bincount(shared.blocks.ravel(), share.ravel(), shared.n_blocks)[1:]
-    pixels = np.bincount(shared.blocks.ravel(), minlength=shared.n_blocks)[1:]
+    pixels = shared.block_pixels
+    totals = (label_sums(shared.blocks, section.grey, number=shared.n_blocks)[1:] - wall * pixels) / (pore - wall)
     value = float(totals.sum() / pixels.sum())
     if not 0.0 <= value <= 1.0:
         return Estimate(math.nan)

@@ -16,12 +16,14 @@ from poroscan.measure.integral_range import block_inflation
 from poroscan.measure.pore_table import pore_table
 from poroscan.measure.settings import MeasureSettings
 from poroscan.measure.surface import Crossings, count_crossings
+from poroscan.measure.tally import label_counts, label_sums
 from poroscan.measure.thickness import ThicknessTable, thickness_table
 from poroscan.measure.topology import open_pieces
 from poroscan.measure.two_point import TwoPoint, radial_average, two_point
 from poroscan.section import BoolArray, Section
 
 Float32 = npt.NDArray[np.float32]
+Float64 = npt.NDArray[np.float64]
 Int32 = npt.NDArray[np.int32]
 
 __all__ = ["Shared", "block_labels", "distance_inside"]
@@ -116,6 +118,16 @@ class Shared:
         """Size of a table indexed by block label (largest possible label + 1)."""
         return 1 + math.prod(-(-n // self.block_side) for n in self.section.particle.shape)
 
+    @cached_property
+    def block_pixels(self) -> npt.NDArray[np.int64]:
+        """Particle pixels of each block 1…n."""
+        return label_counts(self.blocks, number=self.n_blocks)[1:]
+
+    @cached_property
+    def block_pores(self) -> Float64:
+        """Pore pixels of each block 1…n."""
+        return label_sums(self.blocks, self.section.pores, number=self.n_blocks)[1:]
+
     def block_at(self, index: tuple[npt.NDArray[np.int64], ...]) -> Int32:
         """Block of each index, also of indices in a gap of the particle."""
         code = np.zeros(index[0].shape, dtype=np.int32)
@@ -172,7 +184,7 @@ class Shared:
     @cached_property
     def piece_sizes(self) -> npt.NDArray[np.int64]:
         """Pixels of each piece; entry 0 is what is no pore."""
-        return np.bincount(self._pieces[0].ravel(), minlength=self._pieces[1] + 1)
+        return label_counts(self._pieces[0], number=self._pieces[1] + 1)
 
     @cached_property
     def open_pieces(self) -> BoolArray:

@@ -63,7 +63,7 @@ def estimate(section: Section, shared: Shared, outer: npt.NDArray[np.bool_]) -> 
         influence.append((total - mean * weight) / weight.sum())
     p, q = sums
     slope = 2 / (p + q) ** 2
-    pixels = np.bincount(shared.blocks.ravel(), minlength=n)[1:].astype(np.float64)
+    pixels = shared.block_pixels.astype(np.float64)
     result = block_linear(
         (p - q) / (p + q),
         slope * (q * influence[0] - p * influence[1]),

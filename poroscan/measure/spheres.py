@@ -93,13 +93,12 @@ def part(section: Section, settings: MeasureSettings, *, shared: Shared, rng: np
     keep = (table["area"] >= settings.smallest_pore_px) & ~table["touches_frame"]
     d = table["diameter"][keep]
     block = shared.block_at(centroid_index(section, table))[keep]
-    area = np.bincount(shared.blocks.ravel(), minlength=shared.n_blocks)[1:]
     weights = frame_weight(d, section.particle.shape) if section.touches_frame else None
     return Part(
         estimates(
             d,
             block,
-            block_area=area,
+            block_area=shared.block_pixels,
             weights=weights,
             rng=rng,
             inflation=shared.block_inflation,

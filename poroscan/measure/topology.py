@@ -26,6 +26,7 @@ import numpy.typing as npt
 from poroscan.measure.bodies import beside_outline, pieces
 from poroscan.measure.part import Part
 from poroscan.measure.settings import MeasureSettings
+from poroscan.measure.tally import label_counts, label_sums
 from poroscan.measure.uncertainty import block_ratio, estimate_of
 from poroscan.quantities import Estimate
 from poroscan.section import BoolArray, Section
@@ -130,7 +131,7 @@ def part(section: Section, settings: MeasureSettings, *, shared: Shared, rng: np
     estimates["connected_porosity"] = Estimate(largest / shared.n_particle)
     n_walls = shared.n_particle - shared.n_pores
     labels, n = pieces(shared.walls, diagonal=False)
-    wall = _largest_piece(np.bincount(labels.ravel(), minlength=n + 1))
+    wall = _largest_piece(label_counts(labels, number=n + 1))
     estimates["wall_connected_fraction"] = Estimate(wall / n_walls if n_walls else math.nan)
     del labels
     estimates |= _open_and_closed(section, shared)
@@ -141,9 +142,8 @@ def _open_and_closed(section: Section, shared: Shared) -> dict[str, Estimate]:
     if section.view != "whole" or section.touches_frame:
         return {"open_porosity": Estimate(math.nan), "closed_porosity": Estimate(math.nan)}
     opened = shared.open_pieces[shared.pieces]
-    area = np.bincount(shared.blocks.ravel(), minlength=shared.n_blocks)[1:]
-    pores = np.bincount(shared.blocks[section.pores], minlength=shared.n_blocks)[1:]
-    through = np.bincount(shared.blocks[opened], minlength=shared.n_blocks)[1:]
+    area, pores = shared.block_pixels, shared.block_pores
+    through = label_sums(shared.blocks, opened, number=shared.n_blocks)[1:]
     return {
         name: estimate_of(block_ratio(hits, area, inflation=shared.block_inflation, scale="logit"), scale="logit")
         for name, hits in (("open_porosity", through), ("closed_porosity", pores - through))

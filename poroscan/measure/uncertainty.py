@@ -24,6 +24,7 @@ import numpy as np
 import numpy.typing as npt
 from scipy import special
 
+from poroscan.measure.tally import label_counts, label_sums
 from poroscan.quantities import Estimate
 
 Scale = Literal["plain", "log", "logit"]
@@ -74,8 +75,9 @@ def block_sums(
     ``blocks`` are labels as of ``Shared.blocks``; numbers that no pixel carries give 0, which the ratio leaves out.
     """
     n = int(blocks.max(initial=0))
-    flat = None if weights is None else np.ravel(weights).astype(np.float64)
-    return np.bincount(np.ravel(blocks), flat, minlength=n + 1)[1:].astype(np.float64)
+    if weights is None:
+        return label_counts(blocks, number=n + 1)[1:].astype(np.float64)
+    return label_sums(blocks, weights, number=n + 1)[1:]
 
 
 def block_ratio(

@@ -91,5 +91,6 @@ def test_cost_grows_linearly(rng: np.random.Generator) -> None:
     print("\nside   seconds   µs per pixel")
     for n in (256, 512, 1024, 2048, 4096):
         section = particle_section(n, length=8, rng=rng)
-        seconds = best_of(lambda s=section: measure_section(s), repeats=3 if n < 2048 else 1)
+        # The first touch of fresh memory can cost more than the work (virtual machines): the best of two at least.
+        seconds = best_of(lambda s=section: measure_section(s), repeats=3 if n < 2048 else 2)
         print(f"{n:5d} {seconds:8.3f} {1e6 * seconds / n**2:10.3f}")
