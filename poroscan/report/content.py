@@ -16,6 +16,7 @@ from poroscan.quantities import FLAGS, by_key, groups
 from poroscan.report import words
 from poroscan.report.figures import SHOWN, Curves, Units, batch_comparison, batch_figures, particle_figures
 from poroscan.report.gallery import outside_words, worst_first
+from poroscan.report.look_alikes import look_alikes
 from poroscan.report.regime import advice_answer, regime_answer
 from poroscan.report.settings import ReportSettings
 from poroscan.report.source import Key, RunData, curve_units, read_curves
@@ -184,7 +185,7 @@ def _batch(number: int, row: Row, by_batch: Mapping[str, BatchAssessment], shown
         "verdict": verdict_answer(verdict)[0],
         "limits": list(limit_lines(verdict)),
         "distributions": list(distribution_figures(verdict)),
-        "look_alikes": list(row.get("look_alikes") or []),
+        "look_alikes": look_alikes(in_order, shown.data),
         "figures": list(batch_figures(in_order, shown.curves, shown.units)),
         "particles": [_particle(key, shown) for key in keys],
         "pictures": list(_pictures(str(row["batch"]), shown)),
