@@ -17,10 +17,12 @@ from poroscan.atlas.features import Scope
 from poroscan.atlas.matching import COVERAGE, Matcher, ScopeModel
 from poroscan.atlas.model import folds, row_weights
 from poroscan.atlas.store import Atlas
-from poroscan.demix.regime import REGIMES
+from poroscan.demix.regime import LATE, LEAN_DISPERSED, REGIMES, RICH_DISPERSED
 
 FloatArray = npt.NDArray[np.float64]
 IntArray = npt.NDArray[np.intp]
+
+_BORDER_TIME, _BORDER_SHARE = 1.5, 0.04
 
 
 @dataclass(frozen=True, eq=False)
@@ -67,19 +69,42 @@ def held_out(atlas: Atlas, matcher: Matcher) -> tuple[Accuracy, ...]:
         model = matcher.model(scope)  # type: ignore[arg-type]
         chosen = atlas.views.kind[model.rows] == kind
         if chosen.any():
-            found.append(_figures(title, atlas, model, chosen))
+            found.append(_figures(title, atlas, model, chosen, chosen))
+        clear = chosen & clear_cut(atlas)[model.group]
+        if clear.any() and not clear[chosen].all():
+            found.append(_figures(f"{title}; clear cases", atlas, model, chosen, clear))
     return tuple(found)
 
 
-def _figures(title: str, atlas: Atlas, model: ScopeModel, chosen: npt.NDArray[np.bool_]) -> Accuracy:
+def clear_cut(atlas: Atlas) -> npt.NDArray[np.bool_]:
+    """Runs that do not stand at a border of the rules their regime was read by: the limits are conventions, and no section tells
+    their two sides apart (docs/regimes.md). At a border: onset within a factor 1.5 of T_late, or, of an instantaneous run, a
+    polymer-lean share within 0.04 of a limit.
+    """
+    runs = atlas.runs
+    instantaneous = ~np.isin(runs.regime, ("undemixed", "delayed"))
+    late = np.array([LATE[3 if g == "solid" else 2] for g in runs.group])
+    with np.errstate(invalid="ignore"):
+        at_late = (runs.onset > late / _BORDER_TIME) & (runs.onset < late * _BORDER_TIME)
+        shares = np.minimum(np.abs(runs.lean_fraction - LEAN_DISPERSED), np.abs(runs.lean_fraction - RICH_DISPERSED))
+        at_share = instantaneous & (shares < _BORDER_SHARE)
+    return ~(at_late | at_share)
+
+
+def _figures(
+    title: str, atlas: Atlas, model: ScopeModel, kind: npt.NDArray[np.bool_], chosen: npt.NDArray[np.bool_]
+) -> Accuracy:
+    """Figures of the chosen rows, calibrated on all rows of their kind."""
     label = atlas.runs.label()[model.group]
     weight = row_weights(label, model.group, classes=len(REGIMES))
-    probabilities, members = _cross_calibrated(model.unseen, label, model.group, weight, chosen)
+    probabilities, members = _cross_calibrated(model.unseen, label, model.group, weight, kind)
     inside = np.array([
         model.novelty.distance(_features(atlas, model, int(i)), without=int(model.group[i])) <= 1
         for i in np.flatnonzero(chosen)
     ])  # fmt: skip
-    return _judge(title, probabilities, members, label[chosen], model.group[chosen], weight[chosen], inside)
+    return _judge(
+        title, probabilities[chosen], members[chosen], label[chosen], model.group[chosen], weight[chosen], inside
+    )
 
 
 def _features(atlas: Atlas, model: ScopeModel, index: int) -> FloatArray:
@@ -90,7 +115,7 @@ def _features(atlas: Atlas, model: ScopeModel, index: int) -> FloatArray:
 def _cross_calibrated(
     logits: FloatArray, label: IntArray, group: IntArray, weight: FloatArray, chosen: npt.NDArray[np.bool_]
 ) -> tuple[FloatArray, npt.NDArray[np.bool_]]:
-    """Probabilities and sets of the chosen rows, calibrated on the other half of the simulations."""
+    """Probabilities and sets of the chosen rows (others are left undefined), calibrated on the other half of the simulations."""
     half = folds(group, label, n=2)
     probabilities = np.empty_like(logits)
     members = np.empty(logits.shape, dtype=bool)
@@ -99,7 +124,7 @@ def _cross_calibrated(
         calibration = calibrate(logits[other], label[other], weight[other], coverage=COVERAGE)
         probabilities[mine] = calibration.probabilities(logits[mine])
         members[mine] = calibration.members(probabilities[mine])
-    return probabilities[chosen], members[chosen]
+    return probabilities, members
 
 
 def _judge(

@@ -3,11 +3,12 @@
 from __future__ import annotations
 
 import dataclasses
+import math
 from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
 
-from poroscan.atlas.admission import SLOW, outcome_of
+from poroscan.atlas.admission import teaches
 from poroscan.atlas.describe import view_rows
 from poroscan.atlas.run_file import AtlasRun, crop_to_particle, load_run, run_to_bytes
 from poroscan.atlas.space import NAMES
@@ -53,7 +54,7 @@ def collect(
             if not views:
                 continue
             run = relabelled(load_run(path))
-            if outcome_of(run) == SLOW:
+            if not teaches(run, porosity=views[0]["values"]["texture_porosity"] or 0.0):
                 continue
             field = crop_to_particle(run.field, midway(run.field))
             run = dataclasses.replace(run, name=f"{group}-{run.name}", field=field)
@@ -73,4 +74,7 @@ def relabelled(run: AtlasRun) -> AtlasRun:
         return run
     path = [PathRow(*map(float, row)) for row in run.path]
     found = [FirstDemixing(*map(float, row)) for row in run.demixings]
-    return dataclasses.replace(run, regime=read_regime(path, found, dimensions=run.field.ndim).regime)
+    reading = dataclasses.asdict(read_regime(path, found, dimensions=run.field.ndim))
+    regime = reading.pop("regime")
+    plain = {k: None if isinstance(v, float) and not math.isfinite(v) else v for k, v in reading.items()}
+    return dataclasses.replace(run, regime=regime, reading=plain)

@@ -164,7 +164,7 @@ def _own_run(path: Path, label: str, taken: set[str]) -> AtlasRun:
 def _joined_runs(a: RunTable, b: RunTable) -> RunTable:
     return RunTable(
         a.name + b.name, a.group + b.group, a.regime + b.regime, a.source + b.source,
-        np.concatenate([a.parameters, b.parameters]),
+        *(np.concatenate([getattr(a, n), getattr(b, n)]) for n in ("parameters", "onset", "lean_fraction")),
     )  # fmt: skip
 
 

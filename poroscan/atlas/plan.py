@@ -24,7 +24,7 @@ FloatArray = npt.NDArray[np.float64]
 _CANDIDATES = 4096
 _PENALTY = 1e-3
 #: Share of the picks at the borders of a regime, where its chance is near one half, instead of in its middle.
-_AT_BORDER = 0.15
+_AT_BORDER = 0.1
 #: Candidates nearer to a chosen point than this (in shares of the ranges) are passed over.
 _APART = 0.12
 
@@ -77,7 +77,7 @@ def propose(space: Space, runs: Sequence[Known], *, n: int, per_regime: int, see
     free = np.ones(len(candidates), dtype=bool)
     for regime in rng.choice(len(REGIMES), size=n, p=want / want.sum()):
         mine = chance[:, regime]
-        mine = mine * (1 - mine) if rng.random() < _AT_BORDER else mine**2
+        mine = mine * (1 - mine) if rng.random() < _AT_BORDER else mine**3
         weight = np.where(free, mine, 0.0)
         weight = weight if weight.sum() > 0 else free.astype(float)
         pick = int(rng.choice(len(candidates), p=weight / weight.sum()))

@@ -236,4 +236,10 @@ def run_table(entries: Sequence[tuple[str, AtlasRun]], names: Sequence[str]) -> 
         tuple(run.regime for _, run in entries),
         tuple(run.source for _, run in entries),
         np.array(parameters, dtype=np.float64).reshape(len(entries), len(names)),
+        *(np.array([_read(run, n) for _, run in entries]) for n in ("onset", "lean_fraction")),
     )
+
+
+def _read(run: AtlasRun, name: str) -> float:
+    value = run.reading.get(name)
+    return np.nan if value is None else float(value)

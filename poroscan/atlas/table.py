@@ -23,6 +23,9 @@ DESCRIPTOR_NAMES: tuple[str, ...] = tuple(d.name for d in DESCRIPTORS)
 SETS: tuple[str, ...] = ("flat", "fine", "solid", "own")
 
 
+_READ = ("onset", "lean_fraction")
+
+
 @dataclass(frozen=True, eq=False)
 class RunTable:
     """What is known of every run, in one order.
@@ -33,6 +36,9 @@ class RunTable:
         Name, set, regime and origin of each run.
     parameters
         Shape (runs, axes of the formulation space); NaN where not known.
+    onset, lean_fraction
+        What the regime was read from: time of the first demixing over R²/D, and polymer-lean share at the front; NaN where nothing
+        demixed or nothing is known.
     """
 
     name: tuple[str, ...]
@@ -40,6 +46,8 @@ class RunTable:
     regime: tuple[str, ...]
     source: tuple[str, ...]
     parameters: npt.NDArray[np.float64]
+    onset: npt.NDArray[np.float64]
+    lean_fraction: npt.NDArray[np.float64]
 
     def __len__(self) -> int:
         return len(self.name)
@@ -108,6 +116,7 @@ def runs_to_bytes(table: RunTable) -> bytes:
         "name": list(table.name), "set": list(table.group), "regime": list(table.regime), "source": list(table.source)
     }  # fmt: skip
     columns |= {n: table.parameters[:, j] for j, n in enumerate(NAMES)}
+    columns |= {"onset": table.onset, "lean_fraction": table.lean_fraction}
     return _parquet(pa.table(columns))
 
 
@@ -119,16 +128,17 @@ def runs_from_bytes(data: bytes, *, name: str) -> RunTable:
     StoreError
         If a column is missing, a regime or set is not of the list, or a regime has no run.
     """
-    table = _table(data, name=name, columns=("name", "set", "regime", "source", *NAMES))
+    table = _table(data, name=name, columns=("name", "set", "regime", "source", *NAMES, *_READ))
     group, regime = tuple(table["set"].to_pylist()), tuple(table["regime"].to_pylist())
     for known, found, word in ((REGIMES, regime, "regime"), (SETS, group, "set")):
         strange = sorted({str(f) for f in found} - set(known))
         if strange:
             raise StoreError(f"{name}: {word} {strange[0]!r} is not of the list; known: {', '.join(known)}")
     parameters = np.stack([np.asarray(table[n].to_numpy(), dtype=np.float64) for n in NAMES], axis=1)
+    onset, lean = (np.asarray(table[n].to_numpy(), dtype=np.float64) for n in _READ)
     return RunTable(
         tuple(table["name"].to_pylist()), group, regime, tuple(table["source"].to_pylist()),
-        parameters.reshape(len(regime), len(NAMES)),
+        parameters.reshape(len(regime), len(NAMES)), onset, lean,
     )  # fmt: skip
 
 

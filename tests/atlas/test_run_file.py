@@ -15,7 +15,7 @@ from poroscan.atlas.admission import SLOW, outcome_of
 from poroscan.atlas.run_file import LEVELS, MARGIN, crop_to_particle, load_run, run_to_bytes, save_run
 from poroscan.atlas.space import NAMES
 from poroscan.atlas.store import load_atlas, run_table, verify, write_atlas
-from poroscan.atlas.table import RunTable, runs_to_bytes
+from poroscan.atlas.table import runs_to_bytes
 from poroscan.errors import StoreError
 
 
@@ -147,7 +147,7 @@ def test_missing_columns_unknown_labels_and_a_missing_regime_are_refused(tiny_fo
         ("delayed", "no run of the regime 'undemixed'"),
     ):
         changed = tuple(regime if r == "undemixed" else r for r in runs.regime)
-        table = RunTable(runs.name, runs.group, changed, runs.source, runs.parameters)
+        table = replace(runs, regime=changed)
         (folder / "runs.parquet").write_bytes(runs_to_bytes(table))
         _rehash(folder)
         with pytest.raises(StoreError, match=message):
