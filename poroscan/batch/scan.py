@@ -29,6 +29,7 @@ from poroscan.errors import InputError, SettingsError, StoreError
 from poroscan.intake.files import shown
 from poroscan.intake.folders import FolderListing, InputFile, Problem, list_inputs
 from poroscan.intake.sidecar import SidecarRow
+from poroscan.qc.assess import BatchAssessment
 from poroscan.qc.ledger import check_ledger
 
 #: Called after every picture with its outcome, the number done, and the number of all.
@@ -266,10 +267,14 @@ def _finish(
         sum(o.particles for o in outcomes),
         tuple(lines),
         (*listing.notes, *notes),
-        tuple(verdict_line(v) for v in verdicts if v.outcome is not None),
+        tuple(verdict_line(v) for v in sorted(verdicts, key=_worst_first) if v.outcome is not None),
         any(v.outcome == "outside" for v in verdicts),
         ledger_problem,
     )
+
+
+def _worst_first(assessment: BatchAssessment) -> int:
+    return ("outside", "not_decided", "within", None).index(assessment.outcome)
 
 
 def _write_summary(run: RunFolder, about: str) -> None:

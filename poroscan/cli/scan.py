@@ -83,8 +83,10 @@ def _tell(outcome: RunOutcome, *, quiet: bool, as_json: bool) -> None:
     if outcome.ledger_problem:
         _say(f"poroscan: {outcome.ledger_problem}")
     if not quiet:
-        for line in outcome.verdicts:
+        for line in outcome.verdicts[:_MOST_LINES]:
             _say(line)
+        if len(outcome.verdicts) > _MOST_LINES:
+            _say(f"and {len(outcome.verdicts) - _MOST_LINES} more; batches.csv holds them all")
     if as_json:
         print(json.dumps(_summary(outcome), ensure_ascii=True))
     elif not quiet:

@@ -15,7 +15,7 @@ class ReportSettings:
     title
         Heading of the page.
     largest_number_of_particles
-        Particles shown with picture and curves; beyond it, flagged ones go first and the rest stays in the tables.
+        Particles shown with picture and curves; beyond it, the worst are shown and the rest stays in the tables.
     picture_width_px
         Longer side of the picture of one particle.
     picture_quality
