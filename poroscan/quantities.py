@@ -203,7 +203,11 @@ def quantity(base: str) -> Quantity:
         import difflib
 
         near = difflib.get_close_matches(base, _BY_BASE, n=3)
-        raise KeyError(f"no quantity {base!r} in the catalogue; nearest: {', '.join(near) or 'none'}") from None
+        raise KeyError(f"no quantity {base!r} in the catalogue; {_near(near)}") from None
+
+
+def _near(names: list[str]) -> str:
+    return f"nearest: {', '.join(names)}" if names else "docs/quantities.md lists them"
 
 
 def by_key(key: str) -> Quantity:
@@ -220,7 +224,7 @@ def by_key(key: str) -> Quantity:
         import difflib
 
         near = difflib.get_close_matches(key, _BY_KEY, n=3)
-        raise KeyError(f"no column {key!r} in the catalogue; nearest: {', '.join(near) or 'none'}") from None
+        raise KeyError(f"no column {key!r} in the catalogue; {_near(near)}") from None
 
 
 def has_key(key: str) -> bool:

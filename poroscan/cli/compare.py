@@ -48,7 +48,9 @@ def _load(runs: list[Path]) -> dict[str, pd.DataFrame]:
     import pandas as pd
 
     found: list[tuple[Path, str, pd.DataFrame]] = []
-    for run in runs:
+    for number, run in enumerate(runs):
+        if run.resolve() in [other.resolve() for other in runs[:number]]:
+            raise SettingsError(f"{run} is given twice; name each run once")
         table = run / "particles.parquet"
         if not table.is_file():
             raise StoreError(f"{run}: not a finished run (no particles.parquet); give folders that scan wrote")

@@ -73,3 +73,9 @@ def test_wrong_use_is_one_line(
 def test_not_a_run(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
     assert main(["compare", str(tmp_path)]) == 2
     assert "not a finished run" in capsys.readouterr().err
+
+
+def test_a_run_given_twice(tmp_path: Path, rng: np.random.Generator, capsys: pytest.CaptureFixture[str]) -> None:
+    a = _run(tmp_path / "a", {"B1": 0.5}, rng)
+    assert main(["compare", str(a), str(tmp_path / "." / "a")]) == 2
+    assert "is given twice; name each run once" in capsys.readouterr().err
