@@ -110,6 +110,9 @@ class Picture:
         Keys of ``quantities.FLAGS``.
     header
         What the file said of itself (instrument, kV, operator, …), as plain text; empty where nothing is known.
+    excluded
+        Boxes (row0, column0, row1, column1), half open, that show no specimen: a burnt-in scale bar with its label and plate.
+        They are neither evidence of an outline nor of a pore.
     """
 
     grey: npt.NDArray[np.float32]
@@ -119,12 +122,21 @@ class Picture:
     notes: tuple[str, ...] = ()
     flags: tuple[str, ...] = ()
     header: Mapping[str, str] = field(default_factory=lambda: MappingProxyType({}))
+    excluded: tuple[tuple[int, int, int, int], ...] = ()
 
     def __post_init__(self) -> None:
         if self.grey.ndim != 2 or self.grey.size == 0:
             raise ValueError(f"Picture.grey must be a non-empty 2-D array, not of shape {self.grey.shape}")
         if self.grey.dtype != np.float32:
             raise ValueError(f"Picture.grey must be float32, not {self.grey.dtype}")
+        for box in self.excluded:
+            if len(box) != 4 or not (
+                0 <= box[0] < box[2] <= self.grey.shape[0] and 0 <= box[1] < box[3] <= self.grey.shape[1]
+            ):
+                raise ValueError(
+                    f"Picture.excluded must hold boxes (row0, column0, row1, column1) within the picture of shape "
+                    f"{self.grey.shape}, not {box!r}"
+                )
 
 
 @dataclass(frozen=True, eq=False)

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import numpy.typing as npt
@@ -41,6 +41,8 @@ class BarReading:
         Pixel size from it, or None.
     flags, notes
         ``scale_label_unread`` where a bar was found without a length; words for people.
+    label_box
+        Where the label stands, or None where it was not read.
     """
 
     bar: ScaleBar | None = None
@@ -49,6 +51,7 @@ class BarReading:
     candidate: Candidate | None = None
     flags: tuple[str, ...] = ()
     notes: tuple[str, ...] = ()
+    label_box: Box | None = None
 
 
 def read_scale_bar(
@@ -77,7 +80,7 @@ def read_scale_bar(
         )
         return _reading(labelled or bars[0], stated_um, "", doubtful=False)
     for bar, (um, text, box) in found.items():
-        return _reading(bar, um, text, doubtful=box.height < LEAST_LETTER_HEIGHT)
+        return replace(_reading(bar, um, text, doubtful=box.height < LEAST_LETTER_HEIGHT), label_box=box)
     bar = bars[0]
     note = f"a scale bar of {bar.length:.1f} pixels was found, but its label was not read"
     return BarReading(bar, flags=("scale_label_unread",), notes=(note,))

@@ -11,12 +11,13 @@ from types import MappingProxyType
 import numpy as np
 import numpy.typing as npt
 
-from poroscan.intake.banner import find_banner
+from poroscan.intake.banner import find_banner, stretched
 from poroscan.intake.bar_reading import BarReading, read_scale_bar
 from poroscan.intake.files import bad_input, shown
 from poroscan.intake.grey import to_grey
 from poroscan.intake.headers import about, header_candidate, ome_candidate, stated_columns
 from poroscan.intake.image_quality import Quality, image_quality, judge
+from poroscan.intake.overprint import covered
 from poroscan.intake.pictures import read_stored
 from poroscan.intake.pixel_size import Candidate, choose, resolution_candidate
 from poroscan.intake.settings import IntakeSettings
@@ -113,6 +114,7 @@ def inspect_picture(
         notes=(*stored.notes, *grey.notes, *_stated_size(stored), *bar.notes, *chosen.notes, *place),
         flags=tuple(dict.fromkeys((*grey.flags, *chosen.flags, *unread, *judge(quality)))),
         header=MappingProxyType(_header(stored, sidecar)),
+        excluded=_covered(bar, kept),
     )
     return Inspection(picture, grey.values, str(stored.values.dtype), bar, quality)
 
@@ -154,11 +156,18 @@ def _candidates(
 
 
 def _place(bar: BarReading, rows: int) -> tuple[str, ...]:
-    """A note where the scale bar lies in the picture itself, so that it is measured along with the specimen."""
+    """A note where the scale bar lies in the picture itself, so that it hides a piece of the specimen."""
     if bar.bar is None or bar.bar.box.top >= rows:
         return ()
     box = bar.bar.box
     return (f"the scale bar lies in the picture (rows {box.top} to {box.bottom}, columns {box.left} to {box.right})",)
+
+
+def _covered(bar: BarReading, kept: npt.NDArray[np.float32]) -> tuple[tuple[int, int, int, int], ...]:
+    """What the scale bar covers where it lies in the picture itself."""
+    if bar.bar is None or bar.bar.box.top >= kept.shape[0]:
+        return ()
+    return covered(stretched(kept), bar.bar.box, bar.label_box)
 
 
 def _stated_size(stored: Stored) -> tuple[str, ...]:

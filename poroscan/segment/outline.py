@@ -18,7 +18,7 @@ from scipy import ndimage
 from skimage.filters import threshold_otsu
 
 from poroscan.section import BoolArray, FloatArray
-from poroscan.segment.closing import close_mask, fill_holes, inner_radius, mouth_radius
+from poroscan.segment.closing import close_mask, fill_holes, inner_radius, mouth_radius, split_touching
 
 Float32 = npt.NDArray[np.float32]
 
@@ -211,6 +211,8 @@ def quality(name: str, feature: Float32, raw: BoolArray, bodies: BoolArray) -> f
     if frame < 0.08 or width < max(2.5 * hole, least):
         return 0.0
     solid = _solidity(bodies)
+    if solid < 0.8:
+        solid = _solidity_apart(bodies, width)
     if solid < 0.8 or _like_pores(name, feature, raw, bodies):
         return 0.0
     return float(np.clip(0.5 * frame + solid - _solidity(ground), 0.0, 1.0))
@@ -239,24 +241,47 @@ BY_GREY = ("pale", "dark")
 #: Least sharpness of a body's border.
 SHARP = 0.7
 
+#: Neck at which bodies are taken apart before they are judged (as ``SegmentSettings.split_neck``), and most pieces of that kind.
+TOUCHING_NECK = 0.7
+FEW = 6
+
 #: More bodies than this are the structure of an interior, not particles.
 MANY = 60
 
 
 def _solidity(mask: BoolArray) -> float:
     """Area-weighted solidity of the connected bodies of a mask."""
+    labels, count = ndimage.label(mask)
+    return _solidity_of(labels, np.bincount(labels.ravel())[1:]) if count else 0.0
+
+
+def _solidity_of(labels: npt.NDArray[np.int32], sizes: npt.NDArray[np.integer]) -> float:
     from skimage.morphology import convex_hull_image
 
-    labels, count = ndimage.label(mask)
-    if count == 0:
-        return 0.0
-    sizes = np.bincount(labels.ravel())[1:]
     area = hull = 0.0
+    boxes = ndimage.find_objects(labels)
     for k in np.argsort(-sizes)[:12]:
-        box = ndimage.find_objects(labels, int(k) + 1)[int(k)]
+        box = boxes[int(k)]
         area += float(sizes[k])
         hull += float(convex_hull_image(labels[box] == k + 1).sum())
     return area / hull
+
+
+def _solidity_apart(bodies: BoolArray, width: float) -> float:
+    """Solidity of bodies that hang together by necks, taken apart; 0 where the pieces are not those of a few touching particles.
+
+    Particles are few, fill their hulls, and are large against the gaps that a structure of walls would leave between them: the
+    ground holds a disc as large as half the largest piece.
+    """
+    labels = split_touching(bodies, TOUCHING_NECK)
+    sizes = np.bincount(labels.ravel())[1:]
+    large = sizes > 0.1 * sizes.max()
+    if int(large.sum()) > FEW or float(sizes[large].sum()) < 0.9 * float(sizes.sum()):
+        return 0.0
+    if width < 0.5 * math.sqrt(float(sizes.max()) / math.pi):
+        return 0.0
+    solid = _solidity_of(labels, sizes)
+    return solid if solid > 0.9 else 0.0
 
 
 def find_bodies(grey: Float32, choice: str, *, radius: float | None) -> Candidate | None:

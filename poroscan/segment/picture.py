@@ -12,6 +12,7 @@ from scipy import ndimage
 from poroscan.section import BoolArray, Picture, Section, View
 from poroscan.segment.cleanup import Float32, noise_level
 from poroscan.segment.drawing import draw_particles
+from poroscan.segment.excluded import box_mask, fill_unknown
 from poroscan.segment.frame import frame_weight
 from poroscan.segment.inside import find_pores
 from poroscan.segment.outline import find_bodies, reduce_picture
@@ -88,6 +89,9 @@ def segment_picture(
             raise ValueError(f"{name} must have the picture's shape {picture.grey.shape}, not {np.shape(array)}")
     if settings.pores == "trained" and strokes is None and given_pores is None:
         raise ValueError('settings.pores "trained" needs strokes: a label picture (1 material, 2 pore, 3 surroundings)')
+    if picture.excluded:
+        unknown = box_mask(picture.grey.shape, picture.excluded)
+        picture = replace(picture, grey=fill_unknown(picture.grey, unknown))
     grey = picture.grey
     if float(grey.min()) == float(grey.max()) and given_particles is None:
         return _nothing(grey.shape, ("constant_picture", "no_particle"))

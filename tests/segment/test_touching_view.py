@@ -1,0 +1,39 @@
+"""Which view particles in contact and particles cut by the frame are taken for."""
+
+from __future__ import annotations
+
+import numpy as np
+import pytest
+
+from poroscan.section import UNKNOWN_PIXEL_SIZE, Picture
+from poroscan.segment import segment_picture
+from poroscan.segment.view import frame_share, is_edge
+
+
+def _discs(shape: tuple[int, int], centres: list[tuple[int, int]], radius: float) -> np.ndarray:
+    row, column = np.mgrid[: shape[0], : shape[1]]
+    return np.any([np.hypot(row - r, column - c) < radius for r, c in centres], axis=0)
+
+
+def test_three_particles_in_contact_are_whole_particles(rng: np.random.Generator) -> None:
+    """Their common hull is hardly filled, yet each of them fills its own."""
+    shape, centres = (420, 560), [(110, 130), (210, 280), (310, 430)]
+    particle = _discs(shape, centres, 91)
+    pores = _discs(shape, [(r + a, c + b) for r, c in centres for a in (-40, 0, 40) for b in (-40, 0, 40)], 10)
+    grey = np.where(particle & ~pores, 0.55, 0.12) + rng.normal(0, 0.02, shape)
+    found = segment_picture(Picture(grey.astype(np.float32), UNKNOWN_PIXEL_SIZE))
+    assert found.view == "whole"
+    assert len(found.sections) == 3
+
+
+@pytest.mark.parametrize(
+    ("centre", "edge"), [((150, 150), False), ((150, 60), False), ((150, 0), True), ((0, 0), True)]
+)
+def test_a_disc_cut_in_half_is_an_edge(centre: tuple[int, int], edge: bool) -> None:
+    labels = _discs((300, 300), [centre], 120).astype(np.int32)
+    assert is_edge(labels) is edge
+
+
+def test_frame_share_of_half_a_disc() -> None:
+    """Closed form: the diameter over diameter and half circumference, 2/(2 + π)."""
+    assert frame_share(_discs((401, 300), [(200, 0)], 150)) == pytest.approx(2 / (2 + np.pi), abs=0.01)
