@@ -7,6 +7,7 @@ import json
 import os
 import struct
 from collections.abc import Callable
+from contextlib import AbstractContextManager
 from html.parser import HTMLParser
 from pathlib import Path
 
@@ -189,12 +190,21 @@ def test_nothing_in_the_run_is_lost_when_the_folder_is_emptied(
     assert {p: p.read_bytes() for p in run.rglob("*") if p.is_file()} == before
 
 
-@pytest.mark.skipif(not hasattr(os, "geteuid") or os.geteuid() == 0, reason="nothing is unreadable to root")
-def test_unreadable_permission(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
-    path = write_png(tmp_path / "pictures" / "a.png", GOOD)
+@pytest.mark.skipif(os.name == "nt", reason="Windows has no such access rights")
+def test_unreadable_permission(
+    open_folder: Path, capsys: pytest.CaptureFixture[str], plain_user: Callable[[], AbstractContextManager[None]]
+) -> None:
+    path, run = write_png(open_folder / "pictures" / "a.png", GOOD), open_folder / "run"
+    for folder in (path.parent, run):
+        folder.mkdir(exist_ok=True)
+        folder.chmod(0o777)
+    assert _scan(path.parent, open_folder / "control", "--quiet") == 0  # whatever is loaded late is there now
     path.chmod(0)
-    assert _scan(tmp_path / "pictures", tmp_path / "run") == 3
-    assert "a.png" in capsys.readouterr().err
+    with plain_user():
+        code = _scan(path.parent, run)
+    assert code == 3
+    assert "a.png: may not be read; change its access rights" in capsys.readouterr().err
+    assert json.loads((run / "run.json").read_text())["inputs"][0]["outcome"] == "unreadable"
 
 
 @pytest.mark.slow

@@ -6,6 +6,8 @@ import contextlib
 import os
 import struct
 import zlib
+from collections.abc import Callable
+from contextlib import AbstractContextManager
 from pathlib import Path
 
 import numpy as np
@@ -332,12 +334,18 @@ def test_what_is_no_file(tmp_path: Path) -> None:
         load_picture("/dev/null")
 
 
-@pytest.mark.skipif(os.name == "nt" or os.geteuid() == 0, reason="the superuser may read everything")
-def test_unreadable_permission(tmp_path: Path, ramp: np.ndarray) -> None:
-    Image.fromarray(ramp).save(tmp_path / "a.png")
-    (tmp_path / "a.png").chmod(0)
-    with pytest.raises(InputError, match=r"a\.png: may not be read; change its access rights"):
-        load_picture(tmp_path / "a.png")
+@pytest.mark.skipif(os.name == "nt", reason="Windows has no such access rights")
+def test_unreadable_permission(
+    open_folder: Path, ramp: np.ndarray, plain_user: Callable[[], AbstractContextManager[None]]
+) -> None:
+    path = open_folder / "a.png"
+    Image.fromarray(ramp).save(path)
+    path.chmod(0o644)
+    with plain_user():
+        assert load_picture(path).grey.shape == ramp.shape
+    path.chmod(0)
+    with plain_user(), pytest.raises(InputError, match=r"a\.png: may not be read; change its access rights"):
+        load_picture(path)
 
 
 def test_hostile_names_stay_on_one_line(tmp_path: Path) -> None:
