@@ -72,16 +72,19 @@ class Atlas:
         """
         if name not in self._places:
             raise StoreError(f"{self.folder or 'atlas'}: holds no field of a run named {name!r}")
-        file, row = self._places[name]
-        content = pq.read_table(file, columns=["content"]).column("content")[row].as_py()
-        return run_from_bytes(content, name=f"{file.name}: {name}")
+        column, row = self._places[name]
+        return run_from_bytes(column[row].as_py(), name=f"{self.folder}: {name}")
 
     @cached_property
-    def _places(self) -> dict[str, tuple[Path, int]]:
-        places: dict[str, tuple[Path, int]] = {}
+    def _places(self) -> dict[str, tuple[Any, int]]:
+        """Column of contents (mapped from the file) and row of every run."""
+        places: dict[str, tuple[Any, int]] = {}
         for file in sorted(self.folder.glob("fields-*.parquet")) if self.folder else ():
-            names = pq.read_table(file, columns=["name"]).column("name").to_pylist()
-            places.update({n: (file, i) for i, n in enumerate(names)})
+            try:
+                table = pq.read_table(file, columns=["name", "content"], memory_map=True)
+            except (pa.ArrowException, OSError, ValueError) as error:
+                raise StoreError(f"{file}: cannot be read ({error}); fetch or build the atlas again") from error
+            places.update({n: (table.column("content"), i) for i, n in enumerate(table.column("name").to_pylist())})
         return places
 
 

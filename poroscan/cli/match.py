@@ -135,7 +135,7 @@ def _print(
         )
     for batch, pooled in batches.items():
         print(
-            f"batch {batch or '(fields)'}: {pooled.regime or 'nothing to compare'}, probability "
+            f"{'batch ' + batch if batch else 'taken as one batch'}: {pooled.regime or 'nothing to compare'}, probability "
             f"{_number(pooled.probability, 2)}, not ruled out: {', '.join(pooled.prediction_set) or '–'}; "
             f"{_number(100 * pooled.agreement, 0)} % of {pooled.particles - pooled.unlike} particles agree, "
             f"{pooled.unlike} unlike the atlas"
