@@ -112,9 +112,17 @@ def _short(row: Mapping[str, Any]) -> str:
     value = "" if row["value"] is None else f" {row['value']:.4g}"
     if row["low"] is not None and row["high"] is not None:
         value += f" ({row['low']:.4g} to {row['high']:.4g})"
-    reason = f" {row['reason']}" if row["reason"] else ""
-    further = f", {row['further']} more particles would decide it" if row["further"] else ""
-    return f"{what}{value}{reason}{further}"
+    reason = f", {row['reason']}" if row["reason"] else ""
+    further = f", about {row['further']} more would decide it" if row["further"] else ""
+    return f"{what}{value}, wanted {_wanted(row)}{reason}{further}"
+
+
+def _wanted(row: Mapping[str, Any]) -> str:
+    if row["wanted"]:
+        return str(row["wanted"])
+    low, high = row["limit_low"], row["limit_high"]
+    between = f"at most {high:g}" if low is None else f"at least {low:g}" if high is None else f"{low:g} to {high:g}"
+    return between if row["max_share"] is None else f"at most {row['max_share']:g} outside {between}"
 
 
 def _limit(result: LimitResult) -> dict[str, Any]:

@@ -102,6 +102,7 @@ def report_content(data: RunData, *, trends: TrendSection | None = None) -> dict
         "recipe": toml_text(data.run["recipe"]),
         "totals": _totals(data, len(rows)),
         "questions": _questions(data.batches, by_batch, qc),
+        "level": f"{100 * qc.level:g}\u00a0%",
         "columns": [_column(key) for key in _SUMMARY],
         "glance": [_glance(number, row, by_batch) for number, row in enumerate(data.batches, start=1)],
         "comparison": list(batch_comparison(data.batches)) if len(data.batches) > 1 else [],
@@ -184,7 +185,7 @@ def _batch(number: int, row: Row, by_batch: Mapping[str, BatchAssessment], shown
         "badge": VERDICT_WORDS[verdict.outcome] if verdict.outcome else "",
         "verdict": verdict_answer(verdict)[0],
         "limits": list(limit_lines(verdict)),
-        "distributions": list(distribution_figures(verdict)),
+        "distributions": list(distribution_figures(verdict, level=shown.qc.level)),
         "look_alikes": look_alikes(in_order, shown.data),
         "figures": list(batch_figures(in_order, shown.curves, shown.units)),
         "particles": [_particle(key, shown) for key in keys],
@@ -205,6 +206,7 @@ def _particle(key: Key, shown: _Shown) -> dict[str, Any]:
         "numbers": [n for n in (_number(row, k) for k in _BESIDE) if n[1] != words.UNDEFINED],
         "figures": list(particle_figures(key, shown.curves, shown.units, row)),
         "outside": outside_words(row, shown.qc.limits),
+        "regime": f"Demixing regime: {_lower(regime_answer(row))}" if row.get("regime") else "",
         "flags": words.flag_words(row["flags"]),
     }
 

@@ -69,6 +69,8 @@ def advice_answer(row: Row, *, wanted: str | None) -> str:
         return str(row["advice"])
     if not row.get("regime"):
         return "Nothing can be said: without an atlas of simulated particles there is no regime to move from."
+    if row["regime"] == "unlike_atlas":
+        return "Nothing can be said: the particles are unlike any simulated particle of the atlas."
     if wanted is None:
         return "Nothing can be said: the recipe names no regime that is wanted ([qc] regime)."
     if row["regime"] == wanted:

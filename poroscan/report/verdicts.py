@@ -10,6 +10,7 @@ from types import MappingProxyType
 from markupsafe import Markup
 
 from poroscan.qc.assess import BatchAssessment, LimitResult
+from poroscan.qc.interval import bounds_of, mean_interval
 from poroscan.qc.limits import Outcome, Verdict
 from poroscan.qc.regime_check import RegimeVerdict
 from poroscan.qc.settings import Limit
@@ -108,13 +109,15 @@ def _deciding(line: LimitLine) -> str:
     return f"{line.what}: {found}, wanted {line.limits}{further}."
 
 
-def distribution_figures(assessment: BatchAssessment) -> Iterator[tuple[str, Markup]]:
+def distribution_figures(assessment: BatchAssessment, *, level: float = 0.95) -> Iterator[tuple[str, Markup]]:
     """Particles against the limits, one chart per limited quantity.
 
     Parameters
     ----------
     assessment
         The batch against its limits.
+    level
+        Confidence level of the interval of the mean.
 
     Yields
     ------
@@ -127,11 +130,7 @@ def distribution_figures(assessment: BatchAssessment) -> Iterator[tuple[str, Mar
         if (limit.quantity, limit.low, limit.high) in done:
             continue
         done.add((limit.quantity, limit.low, limit.high))
-        mean = next(
-            (r.verdict for r in assessment.results if r.verdict.limit.quantity == limit.quantity and r.verdict.limit.on == "mean"),
-            None,
-        )  # fmt: skip
-        ends = (mean.value, mean.low, mean.high) if mean else (s.mean.mean, math.nan, math.nan)
+        ends = (s.mean.mean, *mean_interval(s.mean, level=level, bounds=bounds_of(limit.quantity)))
         label = (
             f"{labelled(limit.quantity)} of {count(s.values.size, 'particle')} against {_limits_of_particles(limit)}"
         )
@@ -208,8 +207,9 @@ def _statements(result: LimitResult) -> Iterator[str]:
 
 def _regime_line(v: RegimeVerdict, n: int) -> LimitLine:
     found = regime_words(v.found) if v.found else UNDEFINED
+    why = v.reason if v.outcome == "not_decided" else ""
     return LimitLine(
-        "Demixing regime", regime_words(v.wanted), found, n, v.outcome, VERDICT_WORDS[v.outcome], _sentences([v.reason])
+        "Demixing regime", regime_words(v.wanted), found, n, v.outcome, VERDICT_WORDS[v.outcome], _sentences([why])
     )
 
 

@@ -25,6 +25,7 @@ def test_a_regime_comes_with_what_is_not_ruled_out() -> None:
 
 def test_advice_follows_from_found_and_wanted() -> None:
     row = {"regime": "delayed"}
+    assert "Nothing can be said" in advice_answer({"regime": "unlike_atlas"}, wanted="spinodal")
     assert "names no regime" in advice_answer(row, wanted=None)
     assert advice_answer(row, wanted="delayed").startswith("Nothing: ")
     assert "No move from delayed demixing to" in advice_answer(row, wanted="spinodal")
