@@ -62,22 +62,40 @@ def score_folders(found: Path, truth: Path) -> tuple[NamedScore, ...]:
         if drawn is None:
             continue
         outline = _mask_file(truth, name, "particles", anywhere=anywhere)
-        scores.append(NamedScore(name, _score(name, *_found_masks(file), drawn, outline)))
+        scores.append(NamedScore(name, _score(name, file, drawn, outline)))
     if not scores:
         raise InputError(f"{truth}: no NAME_pores.png for any picture of {found}; name drawn masks after the pictures")
     return tuple(scores)
 
 
-def _score(name: str, pores: BoolArray, particles: BoolArray | None, drawn: Path, outline: Path | None) -> Score:
+def _score(name: str, found: Path, drawn: Path, outline: Path | None) -> Score:
+    pores, particles = _found_masks(found)
+    whole = (pores.shape[0] + _banner_rows(found), pores.shape[1])
+
+    def drawn_mask(path: Path) -> BoolArray:
+        mask = read_mask(path)
+        return mask[: pores.shape[0]] if mask.shape == whole else mask
+
     try:
         return score_masks(
             pores=pores,
             particles=particles,
-            drawn_pores=read_mask(drawn),
-            drawn_particles=None if outline is None else read_mask(outline),
+            drawn_pores=drawn_mask(drawn),
+            drawn_particles=None if outline is None else drawn_mask(outline),
         )
     except ValueError as error:
         raise InputError(f"{name}: {error}") from error
+
+
+def _banner_rows(found: Path) -> int:
+    """Rows of the data banner that a run cut off: masks may be drawn on the whole picture."""
+    record = found.with_name("image.json")
+    if found.name != _LABELS or not record.is_file():
+        return 0
+    try:
+        return int(json.loads(record.read_text(encoding="utf-8")).get("banner_rows") or 0)
+    except (OSError, ValueError, AttributeError) as error:
+        raise InputError(f"{record}: is no record of a picture ({error}); run the scan again") from error
 
 
 def _listed(folder: Path) -> list[tuple[str, Path]]:

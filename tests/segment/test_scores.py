@@ -14,6 +14,7 @@ from skimage.io import imsave
 
 from poroscan.cli.app import main
 from poroscan.segment.scoring import agreement, boundary_distance, dice, median_pore_size, score_masks
+from poroscan.segment.truth import read_mask
 
 
 def test_dice_by_hand() -> None:
@@ -127,3 +128,19 @@ def test_score_of_a_run_finds_masks_by_batch(folders: tuple[Path, Path], capsys:
     (run / "run.json").write_text("{}", encoding="utf-8")
     assert main(["score", str(run), str(truth)]) == 3
     assert "run.json: is no record of a run" in capsys.readouterr().err
+
+
+def test_masks_drawn_on_the_whole_picture(folders: tuple[Path, Path], capsys: pytest.CaptureFixture[str]) -> None:
+    """20 rows of banner below: a mask that covers them is cut, one of any other height is refused."""
+    run, truth = folders
+    (run / "images" / "a.tif" / "image.json").write_text('{"banner_rows": 20}', encoding="utf-8")
+    short = (truth / "a_pores.png").read_bytes()
+    for more, code in ((20, 0), (21, 3)):
+        (truth / "a_pores.png").write_bytes(short)
+        pores = read_mask(truth / "a_pores.png")
+        tall = np.vstack([pores, np.ones((more, pores.shape[1]), bool)])
+        imsave(truth / "a_pores.png", (tall * 255).astype(np.uint8), check_contrast=False)
+        assert main(["score", str(run), str(truth), "--json"]) == code
+    said = capsys.readouterr()
+    assert json.loads(said.out)["pictures"][0]["pore_dice"] == 1.0
+    assert "a.tif: drawn_pores must have the shape of pores (120, 120), not (141, 120)" in said.err
