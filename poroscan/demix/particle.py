@@ -19,15 +19,13 @@ from poroscan.demix.regime import RegimeReading, read_regime
 from poroscan.demix.repair import repair_fractions
 from poroscan.demix.simulation_settings import SimulationSettings
 from poroscan.demix.stability import interface_width
-from poroscan.demix.stepper import Stepper
+from poroscan.demix.stepper import OUTSIDE, Stepper
 from poroscan.errors import SettingsError, SimulationError
 
 FloatArray = npt.NDArray[np.floating]
 
 #: Cells that an interface must be wide (10–90 %) to be resolved.
 LEAST_WIDTH = 1.3
-#: Fractions further outside 0…1 than this mean that the run cannot be trusted.
-OUTSIDE = 0.25
 #: A run ends early when for this long (over R²/D) fewer cells moved from row to row than the first share, and no amount or
 #: core composition changed by more than the second over all of it.
 _QUIET_TIME = 0.06

@@ -33,6 +33,8 @@ _TINY = 1e-12
 _HALVINGS = 14
 #: Most rows of a volume joined into one vector: their arrays still fit into the cache next to the core.
 _BLOCK = 16
+#: Fractions further outside 0…1 than this mean that a run cannot be trusted.
+OUTSIDE = 0.25
 
 
 @dataclass(eq=False)
@@ -68,7 +70,7 @@ class Stepper:
     refused: int = field(default=0, init=False)
 
     def __post_init__(self) -> None:
-        _check_fields(self.polymer, self.nonsolvent)
+        _check_fields(self.polymer, self.nonsolvent, slack=_slack(self.count))
         dtype = np.dtype(self.settings.precision)
         self._shape = self.polymer.shape
         self._lattice: Lattice = lattice(self._shape)
@@ -109,7 +111,7 @@ class Stepper:
         ValueError
             If a field is not of the shape of the box, not finite, or no fraction.
         """
-        _check_fields(polymer, nonsolvent)
+        _check_fields(polymer, nonsolvent, slack=_slack(self.count))
         if polymer.shape != self._shape:
             raise ValueError(f"polymer must have the shape of the box, {self._shape}, not {polymer.shape}")
         for padded, values in ((self._p, polymer), (self._n, nonsolvent)):
@@ -230,12 +232,17 @@ def _block(shape: tuple[int, ...]) -> int:
     return max(d for d in range(1, min(_BLOCK, shape[1]) + 1) if shape[1] % d == 0)
 
 
-def _check_fields(polymer: FloatArray, nonsolvent: FloatArray) -> None:
+def _slack(count: int) -> float:
+    """How far outside 0…1 fractions may be that a run starts from, or, with thermal noise behind them, goes on from."""
+    return 0.05 if count == 0 else OUTSIDE
+
+
+def _check_fields(polymer: FloatArray, nonsolvent: FloatArray, *, slack: float) -> None:
     if polymer.shape != nonsolvent.shape:
         raise ValueError(f"polymer and nonsolvent must have one shape, not {polymer.shape} and {nonsolvent.shape}")
     if not (np.isfinite(polymer).all() and np.isfinite(nonsolvent).all()):
         raise ValueError("polymer and nonsolvent must be finite fractions")
-    if min(polymer.min(), nonsolvent.min()) < -0.05 or (polymer + nonsolvent).max() > 1.05:
+    if min(polymer.min(), nonsolvent.min()) < -slack or (polymer + nonsolvent).max() > 1 + slack:
         raise ValueError("polymer and nonsolvent must be fractions: none negative, their sum at most 1")
 
 

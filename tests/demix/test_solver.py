@@ -211,3 +211,16 @@ def test_step_control_refuses_a_step_too_long(rng):
     stepper = Stepper(replace(TERNARY, chi_pn=4.0), quiet_settings(max_step=8.0, max_change=0.002), p, n)
     assert stepper.step() < 1.0
     assert stepper.refused > 0
+
+
+def test_a_run_goes_on_from_what_noise_left(rng):
+    """A start must hold fractions; a run that is taken up again may hold what thermal noise makes of traces, and no more."""
+    p, n = _random(rng, (16, 16))
+    p[3, 4] = -0.1
+    with pytest.raises(ValueError, match="none negative, their sum at most 1"):
+        Stepper(TERNARY, quiet_settings(), p, n)
+    again = Stepper(TERNARY, quiet_settings(), p, n, count=7)
+    assert again.fields()[0][3, 4] == -0.1
+    p[3, 4] = -0.3
+    with pytest.raises(ValueError, match="none negative, their sum at most 1"):
+        Stepper(TERNARY, quiet_settings(), p, n, count=7)
