@@ -72,7 +72,9 @@ def shading(grey: Float32, inside: BoolArray, *, degree: int = 2) -> Float32:
     weight: npt.NDArray[np.floating] = np.ones(values.size)
     coefficients: npt.NDArray[np.floating] = np.zeros(basis.shape[1])
     for _ in range(12):
-        coefficients = np.linalg.lstsq(basis * weight[:, None], values * weight, rcond=None)[0]
+        # normal equations: powers up to 2 on −1…1 are well conditioned, and six numbers need no orthogonal factors
+        weighted = basis * (weight**2)[:, None]
+        coefficients = np.linalg.lstsq(weighted.T @ basis, weighted.T @ values, rcond=None)[0]
         residual = values - basis @ coefficients
         residual = residual - _half_sample_mode(residual)
         scale = 1.4826 * float(np.median(np.abs(residual))) + 1e-9

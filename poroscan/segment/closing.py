@@ -9,10 +9,11 @@ import edt
 import numpy as np
 import numpy.typing as npt
 from scipy import ndimage
-from skimage.morphology import convex_hull_image, local_maxima, reconstruction
+from skimage.morphology import local_maxima, reconstruction
 from skimage.segmentation import watershed
 
 from poroscan.section import BoolArray
+from poroscan.segment.hull import convex_hull
 
 #: Radii tried for an automatic closing, as fractions of the square root of the picture's area.
 _RADII = (0.0, 0.005, 0.0075, 0.011, 0.0165, 0.025, 0.0375, 0.055)
@@ -100,6 +101,10 @@ def mouth_radius(raw: BoolArray) -> float:
 MOUTH = 0.125
 
 
+#: Area of the hull over that of a body that needs no wider closing.
+FILLED = 1.004
+
+
 def close_body(
     body: BoolArray, *, radius: float | None, pore: float = 0.0, holes: float = 0.0
 ) -> tuple[BoolArray, float]:
@@ -129,6 +134,9 @@ def close_body(
     used = MOUTH * inner_radius(body)
     closed = fill_holes(close_mask(body, used))
     inner = inner_radius(closed)
+    # the wider closings stay within the hull: nothing is left for them where the body nearly fills it
+    if float(convex_hull(closed).sum()) < FILLED * float(closed.sum()):
+        return closed | cut_pores(closed, pore=max(pore, 0.004 * float(closed.sum()))), used
     for factor, allowed in ((0.3, max(0.025, 0.1 * holes)), (0.8, 0.06 * holes)):
         wider = fill_holes(close_mask(closed, factor * inner)) if allowed > 0 else closed
         if wider.sum() <= (1 + allowed) * closed.sum():
@@ -155,7 +163,7 @@ def cut_pores(body: BoolArray, *, pore: float) -> BoolArray:
     """
     if not body.any():
         return body
-    hull = convex_hull_image(body, offset_coordinates=False)
+    hull = convex_hull(body)
     bays, count = ndimage.label(ndimage.binary_opening(hull & ~body, np.ones((3, 3))))
     if count == 0:
         return np.zeros_like(body)

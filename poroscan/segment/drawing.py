@@ -14,9 +14,16 @@ from poroscan.section import BoolArray
 from poroscan.segment.cleanup import Float32
 from poroscan.segment.closing import close_body, distance_to, fill_holes, split_touching
 from poroscan.segment.outline import BY_GREY, Candidate, texture_window
+from poroscan.segment.rim import bulge_over_mouths
 from poroscan.segment.settings import SegmentSettings
 
 Labels = npt.NDArray[np.int32]
+
+
+#: Smallest island of wall at an open rim, over the area of the particle; what is smaller is dust.
+ISLAND = 2e-4
+#: Least pore fraction of particles whose outline is bulged over mouths; dense ones have none.
+POROUS = 0.02
 
 
 @dataclass(frozen=True, eq=False)
@@ -115,17 +122,33 @@ def _fine_mask(
     grown = distance_to(body) <= (3 * step if best.name in BY_GREY else step)
     deep = distance_to(~body) > band
     own = (raw & grown & ~others) | deep
-    filled = _largest(ndimage.binary_opening(fill_holes(own), np.ones((3, 3))) | deep)
+    filled = _with_islands(ndimage.binary_opening(fill_holes(own), np.ones((3, 3))) | deep, body)
     pore = _largest_area(filled & ~raw) if best.name in BY_GREY else 0.0
     holes = float((filled & ~raw).sum()) / max(float(filled.sum()), 1.0) if best.name in BY_GREY else 0.0
     closed, used = close_body(filled, radius=radius, pore=pore, holes=holes)
-    closed = closed & ~others
+    closed = _largest(closed & ~others)
+    if radius is None and best.name in BY_GREY and not others.any() and holes > POROUS:
+        closed = fill_holes(bulge_over_mouths(closed, raw & filled))
     return closed, float((closed & ~filled).sum()) / max(float(closed.sum()), 1.0), used
 
 
 def _largest_area(mask: BoolArray) -> float:
     labels, count = ndimage.label(mask)
     return float(np.bincount(labels.ravel())[1:].max()) if count else 0.0
+
+
+def _with_islands(mask: BoolArray, body: BoolArray) -> BoolArray:
+    """The largest piece, and the pieces of wall beside it that lie in the body of the reduced picture."""
+    labels, count = ndimage.label(mask)
+    if count <= 1:
+        return mask
+    sizes = np.bincount(labels.ravel()).astype(np.float64)
+    sizes[0] = 0
+    within = np.bincount(labels[body], minlength=count + 1)
+    keep = (sizes >= ISLAND * sizes.max()) & (within >= 0.5 * sizes)
+    keep[int(sizes.argmax())] = True
+    keep[0] = False
+    return keep[labels]
 
 
 def _largest(mask: BoolArray) -> BoolArray:
