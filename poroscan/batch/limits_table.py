@@ -37,7 +37,10 @@ LIMIT_COLUMNS: Mapping[str, tuple[str, str]] = MappingProxyType(
         "n": (_WHOLE, "particles that entered"),
         "verdict": (_TEXT, "within, outside or not_decided"),
         "reason": (_TEXT, "why it is not decided, in words"),
-        "further": (_WHOLE, "further particles that would decide it, the estimate staying where it is"),
+        "further": (
+            _WHOLE,
+            "further particles that would decide it, the estimate staying where it is, or that are needed first",
+        ),
         "tolerance_low": (_NUMBER, "lower end of the tolerance interval (ISO 16269-6)"),
         "tolerance_high": (_NUMBER, "upper end of the tolerance interval (ISO 16269-6)"),
         "tolerance_content": (_NUMBER, "share of the particles that it holds"),
@@ -113,7 +116,7 @@ def _short(row: Mapping[str, Any]) -> str:
     if row["low"] is not None and row["high"] is not None:
         value += f" ({row['low']:.4g} to {row['high']:.4g})"
     reason = f", {row['reason']}" if row["reason"] else ""
-    further = f", about {row['further']} more would decide it" if row["further"] else ""
+    further = f", about {row['further']} more needed" if row["further"] else ""
     return f"{what}{value}, wanted {_wanted(row)}{reason}{further}"
 
 

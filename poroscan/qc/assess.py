@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -81,9 +81,21 @@ def assess_batch(
     used = counted(rows)
     images = int(used["image"].nunique())
     results = tuple(_result(limit, rows, settings, images) for limit in settings.limits)
-    regime = None if settings.regime is None else judge_regime(settings.regime, row or {})
+    regime = _regime(settings, row or {}, len(used), images)
     outcomes = [r.verdict.outcome for r in results] + ([regime.outcome] if regime else [])
     return BatchAssessment(name, len(used), images, results, overall(outcomes) if outcomes else None, regime)
+
+
+def _regime(settings: QcSettings, row: Mapping[str, Any], particles: int, images: int) -> RegimeVerdict | None:
+    if settings.regime is None:
+        return None
+    verdict = judge_regime(settings.regime, row)
+    if verdict.found is not None and particles < settings.min_particles:
+        few = f"{particles} of at least {settings.min_particles} particles"
+        return replace(verdict, outcome="not_decided", reason=few)
+    if verdict.found is not None and images < settings.min_images:
+        return replace(verdict, outcome="not_decided", reason=f"{images} of at least {settings.min_images} pictures")
+    return verdict
 
 
 def _result(limit: Limit, rows: pd.DataFrame, settings: QcSettings, images: int) -> LimitResult:

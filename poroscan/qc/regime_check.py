@@ -31,7 +31,8 @@ def judge_regime(wanted: str, row: Mapping[str, Any]) -> RegimeVerdict:
     """
     found = row.get("regime") or None
     if found is None:
-        return RegimeVerdict(wanted, None, "not_decided", "the regime is not determined: no atlas")
+        why = "no particle counts" if row.get("particles_used") == 0 else "no atlas"
+        return RegimeVerdict(wanted, None, "not_decided", f"the regime is not determined: {why}")
     if found == "unlike_atlas":
         return RegimeVerdict(wanted, found, "not_decided", "unlike any simulated particle of the atlas")
     possible = set(str(row.get("regime_set") or found).replace(",", " ").split())

@@ -25,6 +25,7 @@ REGIME_WORDS: Mapping[str, str] = MappingProxyType(
     }
 )
 
+_NO_PARTICLE = "Not determined: no particle of this batch counts."
 _NONE = "Not determined: no atlas of simulated particles was available."
 
 
@@ -43,7 +44,7 @@ def regime_answer(row: Row) -> str:
     """
     found = row.get("regime")
     if not found:
-        return _NONE
+        return _NO_PARTICLE if row.get("particles_used") == 0 else _NONE
     if found == "unlike_atlas":
         return "Not determined: the particles are unlike any simulated particle of the atlas."
     probability = row.get("regime_probability")
@@ -67,6 +68,8 @@ def advice_answer(row: Row, *, wanted: str | None) -> str:
     """
     if row.get("advice"):
         return str(row["advice"])
+    if row.get("particles_used") == 0:
+        return "Nothing can be said: no particle of this batch counts."
     if not row.get("regime"):
         return "Nothing can be said: without an atlas of simulated particles there is no regime to move from."
     if row["regime"] == "unlike_atlas":

@@ -66,7 +66,7 @@ def limit_lines(assessment: BatchAssessment) -> Iterator[LimitLine]:
     """
     for result in assessment.results:
         v = result.verdict
-        further = f"about {count(v.further, 'further particle')} would decide it" if v.further else ""
+        further = _further(v)
         notes = [v.reason, further, *_statements(result)]
         yield LimitLine(
             _what(v.limit),
@@ -80,6 +80,16 @@ def limit_lines(assessment: BatchAssessment) -> Iterator[LimitLine]:
         )
     if assessment.regime is not None:
         yield _regime_line(assessment.regime, assessment.particles)
+
+
+def _further(v: Verdict) -> str:
+    """What would decide it; where the smallest number is not reached, more may be needed after that."""
+    if not v.further:
+        return ""
+    number = count(v.further, "further particle")
+    if v.n and " of at least " in v.reason:
+        return f"{number} {'is' if v.further == 1 else 'are'} needed before it can be decided"
+    return f"about {number} would decide it"
 
 
 def verdict_answer(assessment: BatchAssessment) -> list[str]:

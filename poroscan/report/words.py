@@ -176,6 +176,8 @@ def batch_sentences(row: Row) -> list[str]:
     row
         Row of batches.csv.
     """
+    if not row["particles"]:
+        return ["No particle was measured."]
     if not row["particles_used"]:
         return ["No particle of this batch counts towards a mean; the particles below stand for themselves."]
     sentences = [

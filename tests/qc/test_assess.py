@@ -119,3 +119,14 @@ def test_compare_says_what_is_wrong(rng: np.random.Generator) -> None:
     empty = a.assign(porosity=np.nan)
     made = compare({"a": a, "b": empty}, quantities=["porosity"])
     assert math.isnan(made.pairs[0].p_holm)
+
+
+@pytest.mark.parametrize(("n", "outcome"), [(2, "not_decided"), (3, "outside")])
+def test_a_regime_of_few_particles_decides_nothing(rng: np.random.Generator, n: int, outcome: str) -> None:
+    found = {"regime": "delayed", "regime_set": "delayed"}
+    rows = _rows(rng, "a", 0.5, images=n, each=1)
+    made = assess(rows, QcSettings(regime="spinodal"), batches={"a": found})["a"]
+    assert made.outcome == outcome
+    many = assess(rows, QcSettings(regime="spinodal", min_particles=1, min_images=9), batches={"a": found})["a"]
+    assert many.regime is not None
+    assert many.regime.reason == f"{n} of at least 9 pictures"
