@@ -4,12 +4,9 @@ import math
 
 import numpy as np
 import pytest
-from media import disc, gaussian_field, level_cut
-from scipy import special
+from media import disc, gaussian_field
 
-from poroscan.measure import MeasureSettings, measure_section, pore_size, porosity, surface, thickness
-from poroscan.measure.shared import Shared
-from poroscan.quantities import Estimate
+from poroscan.measure import measure_section
 from poroscan.section import UNKNOWN_PIXEL_SIZE, Circle, PixelSize, Section
 
 
@@ -120,28 +117,3 @@ def test_views() -> None:
     assert diameter.value == 180
     assert diameter.components == {"frame": 3.0}
     assert diameter.high == pytest.approx(180 + 1.959964 * 3)
-
-
-@pytest.mark.slow
-def test_coverage_of_the_intervals_for_porosity_surface_and_d50(rng: np.random.Generator) -> None:
-    # 400 random round sections of a level-cut field: the stated 95 % intervals hold the truth in 92 to 97 % of them. Porosity
-    # and surface have closed forms. A pore size has none, and the outline cuts pores: its truth is that of all sections pooled.
-    particle, fraction, length = disc(120, margin=2), 0.35, 5.0
-    u = special.ndtri(1 - fraction)
-    truth = {"porosity": fraction, "surface_per_volume": 2 / math.pi / length * math.exp(-u * u / 2)}
-    sizes = ("pore_d50", "thickness_d50", "wall_d50")
-    found: list[dict[str, Estimate]] = []
-    for _ in range(400):
-        pores = particle & level_cut(particle.shape, length=length, fraction=fraction, rng=rng)
-        section, chosen = Section(pores, particle, UNKNOWN_PIXEL_SIZE), MeasureSettings()
-        shared, estimates = Shared(section, chosen), {}
-        for module in (porosity, surface, pore_size, thickness):
-            estimates |= module.part(section, chosen, shared=shared, rng=rng).estimates
-        found.append({base: estimates[base] for base in (*truth, *sizes)})
-    truth |= {base: float(np.mean([f[base].value for f in found])) for base in sizes}
-    share = {base: np.mean([f[base].low <= value <= f[base].high for f in found]) for base, value in truth.items()}
-    naive = np.mean([abs(f["porosity"].value - 0.35) < 1.96 * math.sqrt(0.35 * 0.65 / particle.sum()) for f in found])
-    print(f"coverage of 400: {share}, independent pixels: {naive}")
-    assert naive < 0.5  # an interval from independent pixels fails the same test
-    for base, covered in share.items():
-        assert 0.92 <= covered <= 0.97, (base, covered)

@@ -5,10 +5,13 @@ import math
 import edt
 import numpy as np
 import pytest
-from media import boolean_discs, disc, gaussian_field
+from media import boolean_discs, disc, gaussian_field, level_cut
 from scipy import ndimage
 
+from poroscan.measure import MeasureSettings, thickness
+from poroscan.measure.shared import Shared
 from poroscan.measure.thickness import containment_tables, local_thickness, squared_thickness, thickness_table
+from poroscan.section import UNKNOWN_PIXEL_SIZE, Section
 
 
 def brute_force(mask: np.ndarray) -> np.ndarray:
@@ -147,3 +150,19 @@ def test_wrong_masks_are_named(bad: object) -> None:
 def test_pixel_size_must_be_positive() -> None:
     with pytest.raises(ValueError, match="pixel_size must be a positive length"):
         local_thickness(np.ones((3, 3), bool), pixel_size=0.0)
+
+
+@pytest.mark.slow
+def test_coverage_of_the_intervals_for_thickness_in_round_sections(rng: np.random.Generator) -> None:
+    # A thickness has no closed form, and the outline cuts pores: its truth is that of 400 sections pooled.
+    particle, found = disc(120, margin=2), []
+    for _ in range(400):
+        pores = particle & level_cut(particle.shape, length=5.0, fraction=0.35, rng=rng)
+        section, settings = Section(pores, particle, UNKNOWN_PIXEL_SIZE), MeasureSettings()
+        found.append(thickness.part(section, settings, shared=Shared(section, settings), rng=rng).estimates)
+    for base in ("thickness_d50", "wall_d50"):
+        estimates = [f[base] for f in found]
+        truth = np.mean([e.value for e in estimates])
+        covered = np.mean([e.low <= truth <= e.high for e in estimates])
+        print(f"{base}: coverage of 400: {covered:.3f}")
+        assert 0.92 <= covered <= 0.97, base
