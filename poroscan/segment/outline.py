@@ -292,3 +292,13 @@ def find_bodies(grey: Float32, choice: str, *, radius: float | None) -> Candidat
     good = [c for c in found.values() if c.quality >= ACCEPT]
     # an outline drawn by grey value is exact to the pixel, one by texture to its window: it is the last resort
     return max(good, key=lambda c: c.quality - (0.0 if c.name in BY_GREY else 0.3), default=None)
+
+
+#: Bodies that cover less than this share of the picture, before a ground whose grey values stand less than this many spreads away
+#: from theirs, may be debris on a surface.
+SCANT, FAINT = 0.05, 3.5
+
+
+def like_debris(best: Candidate) -> bool:
+    """Whether bodies are small against the picture and hardly stand out: debris on a surface rather than particles before a ground."""
+    return float(best.bodies.mean()) < SCANT and half_level(best.feature)[1] < FAINT

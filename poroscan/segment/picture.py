@@ -15,7 +15,7 @@ from poroscan.segment.drawing import draw_particles
 from poroscan.segment.excluded import box_mask, fill_unknown
 from poroscan.segment.frame import frame_weight
 from poroscan.segment.inside import find_pores
-from poroscan.segment.outline import find_bodies, reduce_picture
+from poroscan.segment.outline import find_bodies, like_debris, reduce_picture
 from poroscan.segment.pores import Pores
 from poroscan.segment.result import Segmentation, Threshold
 from poroscan.segment.settings import SegmentSettings
@@ -126,8 +126,13 @@ def _particles(grey: Float32, settings: SegmentSettings, given: npt.NDArray[np.i
     if not drawn.labels.any():
         return _Found("whole", drawn.labels, "none", flags=("no_particle",))
     method = f"outline: {best.name}"
-    flags = ("outline_uncertain",) if drawn.raw is None else ()
-    return _Found(_view_of(drawn.labels, settings), drawn.labels, method, drawn.raw, drawn.split, flags, drawn.notes)
+    debris = settings.outline == "auto" and like_debris(best)
+    flags = ("outline_uncertain",) if drawn.raw is None or debris else ()
+    notes = (*drawn.notes, *((DEBRIS,) if debris else ()))
+    return _Found(_view_of(drawn.labels, settings), drawn.labels, method, drawn.raw, drawn.split, flags, notes)
+
+
+DEBRIS = "what was found is small against the picture and hardly stands out from it: is it debris on a surface?"
 
 
 def _interior(shape: tuple[int, ...]) -> _Found:

@@ -7,6 +7,7 @@ import pytest
 
 from poroscan.section import UNKNOWN_PIXEL_SIZE, Picture
 from poroscan.segment import segment_picture
+from poroscan.segment.outline import Candidate, like_debris
 from poroscan.segment.view import frame_share, is_edge
 
 
@@ -37,3 +38,15 @@ def test_a_disc_cut_in_half_is_an_edge(centre: tuple[int, int], edge: bool) -> N
 def test_frame_share_of_half_a_disc() -> None:
     """Closed form: the diameter over diameter and half circumference, 2/(2 + π)."""
     assert frame_share(_discs((401, 300), [(200, 0)], 150)) == pytest.approx(2 / (2 + np.pi), abs=0.01)
+
+
+@pytest.mark.parametrize(("contrast", "share", "debris"), [(0.2, 0.01, True), (2.0, 0.01, False), (0.2, 0.3, False)])
+def test_debris_is_small_and_hardly_stands_out(
+    rng: np.random.Generator, contrast: float, share: float, debris: bool
+) -> None:
+    """Otsu's threshold splits one Gaussian mode into halves whose medians are 2.5 to 3.5 of their spreads apart."""
+    feature = rng.normal(0.3, 0.1, (200, 200)).astype(np.float32)
+    bodies = np.zeros(feature.shape, bool)
+    bodies[: int(200 * share)] = True
+    feature[bodies] += contrast
+    assert like_debris(Candidate("pale", feature, 0.4, bodies, bodies, 3.0, 0.5)) is debris
