@@ -2,7 +2,8 @@
 
 The solver steps with the fields as they are; this repair touches only copies that become results. It clips nothing: a
 cell that lacks an amount d of a component takes it from its neighbours, in proportion to what they hold, and gives them as
-much of the component that it holds most of. Every cell still adds up to 1, every component keeps its total.
+much of the component that it holds most of. Every cell still adds up to 1, every component keeps its total. Traces are
+taken from traces as far as they go, so that walls and pores keep their shape.
 """
 
 from __future__ import annotations
@@ -14,6 +15,10 @@ import numpy.typing as npt
 from numba import njit
 
 FloatArray = npt.NDArray[np.floating]
+
+#: Cells that hold at most this much of a component are asked first, within this reach; then all.
+_TRACE = 0.2
+_REACH = 4
 
 
 @dataclass(frozen=True, eq=False)
@@ -37,7 +42,7 @@ def repair_fractions(polymer: FloatArray, nonsolvent: FloatArray) -> Repaired:
     """Exchange deficits with neighbouring cells until polymer, non-solvent and solvent are in [0, 1] everywhere.
 
     The neighbourhood is the 3 × 3 (× 3) cells around the one that lacks something, periodic, and grows while it holds too
-    little. Cells are taken in order, so that the result is the same bits for the same fields. Fields of single precision are
+    little: first up to four cells away among cells with at most 0.2 of the component, then among all. Cells are taken in order, so that the result is the same bits for the same fields. Fields of single precision are
     rounded towards the inside of the triangle (1e-7).
 
     Parameters
@@ -90,18 +95,21 @@ def _exchange(parts):
                 for a in range(3):
                     if parts[a, z, y, x] < 0:
                         amount = -parts[a, z, y, x]
-                        reach = 1
-                        while not _take(parts, a, z, y, x, amount, reach):
-                            if 2 * reach + 1 >= max(depth, height, width):
-                                return -1.0
+                        reach, most = 1, _TRACE
+                        while not _take(parts, a, z, y, x, amount, reach, most):
                             reach += 1
+                            if most == _TRACE:
+                                if reach > _REACH:
+                                    reach, most = 1, np.inf
+                            elif 2 * reach - 1 >= max(depth, height, width):
+                                return -1.0
                         moved += amount
     return moved
 
 
 @njit(cache=True, error_model="numpy")
-def _take(parts, a, z, y, x, amount, reach):
-    """Take an amount of component a from the cells within reach, for the fullest component of the cell; False if too little."""
+def _take(parts, a, z, y, x, amount, reach, most):
+    """Take an amount of component a from cells within reach, for the fullest component of the cell; False if they hold too little."""
     _, depth, height, width = parts.shape
     # each cell of a small periodic box once, however far the reach
     z_0, z_1 = z - min(reach, (depth - 1) // 2), z + min(reach, depth // 2) + 1
@@ -111,7 +119,9 @@ def _take(parts, a, z, y, x, amount, reach):
     for k in range(z_0, z_1):
         for j in range(y_0, y_1):
             for i in range(x_0, x_1):
-                held += max(parts[a, k % depth, j % height, i % width], 0.0)
+                here = parts[a, k % depth, j % height, i % width]
+                if 0 < here <= most:
+                    held += here
     if held < amount:
         return False
     b = 0
@@ -122,9 +132,10 @@ def _take(parts, a, z, y, x, amount, reach):
     for k in range(z_0, z_1):
         for j in range(y_0, y_1):
             for i in range(x_0, x_1):
-                given = ratio * max(parts[a, k % depth, j % height, i % width], 0.0)
-                parts[a, k % depth, j % height, i % width] -= given
-                parts[b, k % depth, j % height, i % width] += given
+                here = parts[a, k % depth, j % height, i % width]
+                if 0 < here <= most:
+                    parts[a, k % depth, j % height, i % width] = here - ratio * here
+                    parts[b, k % depth, j % height, i % width] += ratio * here
     parts[a, z, y, x] = 0.0
     parts[b, z, y, x] -= amount
     return True

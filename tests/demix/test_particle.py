@@ -163,7 +163,9 @@ def test_lever_rule_at_the_middle_of_a_tie_line():
         n, p = (1 - share) * rich + share * lean
         assert lever.lean_fraction(n, p) == pytest.approx(share, abs=2e-3)
     assert np.isnan(lever.lean_fraction(0.02, 0.3))
-    assert lever.lean_fraction(0.71, 0.3) == pytest.approx(lever.lean_fraction(0.7, 0.3), abs=1e-9)  # off the triangle by noise
+    assert lever.lean_fraction(0.71, 0.3) == pytest.approx(
+        lever.lean_fraction(0.7, 0.3), abs=1e-9
+    )  # off the triangle by noise
 
 
 def _recorder(shape=(64, 64), radius=24.0):

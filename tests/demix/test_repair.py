@@ -75,6 +75,19 @@ def test_far_cells_help_where_near_ones_hold_nothing():
     assert mended.polymer[6, 6] == 0.2
 
 
+def test_traces_are_mended_from_traces_and_only_then_from_walls():
+    p = np.full((5, 5), 0.6)
+    p[:, :2] = 0.01
+    p[2, 0] = -0.03
+    mended = repair_fractions(p, np.full_like(p, 0.2))
+    np.testing.assert_array_equal(mended.polymer[:, 2:], 0.6)
+    p[2, 0] = -0.1  # more than the nine traces hold
+    mended = repair_fractions(p, np.full_like(p, 0.2))
+    assert mended.polymer.min() >= 0
+    assert mended.polymer.sum() == pytest.approx(p.sum(), abs=1e-12)
+    assert mended.polymer[:, 4].min() < 0.6  # over the edge of the box
+
+
 @pytest.mark.parametrize("shape", SHAPES)
 def test_nothing_negative_nothing_changed(shape, rng):
     p, n = 0.5 * rng.random(shape).astype(np.float32), 0.5 * rng.random(shape).astype(np.float32)

@@ -37,6 +37,17 @@ def test_rates_equal_slow_version(shape, rng):
 
 
 @pytest.mark.parametrize("shape", SHAPES)
+def test_the_loop_with_noise_has_the_same_fluxes(shape, rng):
+    """The compiled loop with thermal flux is another one: with vanishing noise it must give what the quiet one gives."""
+    settings = quiet_settings(arrest_fraction=0.4, kappa_nonsolvent=0.4)
+    p, n = _random(rng, shape)
+    quiet = Stepper(TERNARY, settings, p, n).rates(1.0)
+    for got, expected in zip(Stepper(TERNARY, replace(settings, noise=1e-24), p, n).rates(1.0), quiet, strict=True):
+        assert (got != expected).any()
+        np.testing.assert_allclose(got, expected, rtol=0, atol=1e-10)
+
+
+@pytest.mark.parametrize("shape", SHAPES)
 def test_symbol_is_that_of_the_laplacian(shape, rng):
     field = rng.standard_normal(shape)
     spectral = np.fft.irfftn(-lattice(shape).symbol() * np.fft.rfftn(field), s=shape, axes=range(field.ndim))
