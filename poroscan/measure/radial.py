@@ -172,7 +172,7 @@ def asymmetry(table: RingTable, *, inflation: float = 1.0) -> BlockEstimate:
     residual = table.residual()
     influence = slope * q * residual.between(half, 1)[0] / outer_pixels.sum()
     influence = influence - slope * p * residual.between(0, half)[0] / inner_pixels.sum()
-    return block_linear((p - q) / (p + q), influence, outer_pixels + inner_pixels, inflation=inflation)
+    return block_linear((p - q) / (p + q), influence, outer_pixels + inner_pixels, inflation=inflation, scale="signed")
 
 
 def slope(table: RingTable, *, inflation: float = 1.0, number: int = 20) -> BlockEstimate:
@@ -216,7 +216,7 @@ def part(section: Section, settings: MeasureSettings, *, shared: Shared, rng: np
     if section.view == "whole":
         result = asymmetry(table, inflation=inflation)
         sd = threshold_sd(*(asymmetry(t).value for t in band)) if len(band) == 2 else None
-        estimates["radial_asymmetry"] = estimate_of(result, threshold=sd)
+        estimates["radial_asymmetry"] = estimate_of(result, threshold=sd, scale="signed")
         estimates["radial_slope"] = estimate_of(slope(table, inflation=inflation))
     curves = [_normalised_curve(table, settings.radial_bins, inflation)]
     if section.view == "whole" and section.ndim == 2:

@@ -69,5 +69,6 @@ def estimate(section: Section, shared: Shared, outer: npt.NDArray[np.bool_]) -> 
         slope * (q * influence[0] - p * influence[1]),
         pixels,
         inflation=shared.block_inflation,
+        scale="signed",
     )
     return estimate_of(result)

@@ -27,7 +27,7 @@ from scipy import special
 from poroscan.measure.tally import label_counts, label_sums
 from poroscan.quantities import Estimate
 
-Scale = Literal["plain", "log", "logit"]
+Scale = Literal["plain", "log", "logit", "signed"]
 
 #: Effective number of blocks below which no interval is stated by blocks.
 LEAST_BLOCKS = 5.0
@@ -215,15 +215,22 @@ def block_quantile(
 
 
 def symmetric_on(value: float, half_width: float, *, scale: Scale) -> tuple[float, float]:
-    """Interval value ± half_width, made symmetric on a plain, logarithmic or logit scale (delta method)."""
+    """Interval value ± half_width, made symmetric on a scale by the delta method.
+
+    ``log`` is for positive quantities, ``logit`` for fractions, ``signed`` for contrasts between −1 and 1 (Fisher's z =
+    artanh; Fisher 1921, Metron 1, 3): the interval then stays where the quantity can be.
+    """
     if scale == "log" and value > 0:
         factor = math.exp(half_width / value)
         return value / factor, value * factor
     if scale == "logit" and 0 < value < 1:
         step, centre = half_width / (value * (1 - value)), math.log(value / (1 - value))
         return float(special.expit(centre - step)), float(special.expit(centre + step))
-    if scale not in ("plain", "log", "logit"):
-        raise ValueError(f"scale must be plain, log or logit, not {scale!r}")
+    if scale == "signed" and -1 < value < 1:
+        step, centre = half_width / (1 - value * value), math.atanh(value)
+        return math.tanh(centre - step), math.tanh(centre + step)
+    if scale not in ("plain", "log", "logit", "signed"):
+        raise ValueError(f"scale must be plain, log, logit or signed, not {scale!r}")
     return value - half_width, value + half_width
 
 

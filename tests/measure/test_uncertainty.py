@@ -88,6 +88,15 @@ def test_intervals_stay_in_range(scale):
     assert_allclose(narrow, plain, atol=1e-7)
 
 
+def test_contrasts_stay_between_their_ends():
+    """Fisher's z: for a wide interval near an end the plain one would leave −1…1; for a narrow one both agree."""
+    low, high = symmetric_on(-0.78, 0.4, scale="signed")
+    assert -1 < low < -0.78 < high < 0
+    mirrored = symmetric_on(0.78, 0.4, scale="signed")
+    assert mirrored == pytest.approx((-high, -low))
+    assert symmetric_on(0.4, 1e-4, scale="signed") == pytest.approx(symmetric_on(0.4, 1e-4, scale="plain"), abs=1e-7)
+
+
 def test_woodruff_interval_covers_the_median(rng):
     covered = 0
     for _ in range(400):
