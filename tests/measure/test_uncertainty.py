@@ -178,7 +178,7 @@ def test_every_component_stays_visible():
         (lambda: block_ratio([1.0], [-1.0]), "denominators must not be negative"),
         (lambda: block_ratio([1.0] * 9, [1.0] * 9, level=95), "level must lie between 0 and 1"),
         (lambda: block_ratio([1.0], [1.0], inflation=0), "inflation must be a positive factor"),
-        (lambda: block_ratio([1.0] * 9, [2.0] * 9, scale="probit"), "scale must be plain, log or logit"),
+        (lambda: block_ratio([1.0] * 9, [2.0] * 9, scale="probit"), "scale must be plain, log, logit or signed"),
         (lambda: block_quantile([1.0], [1.0], [1], q=50), "q must lie between 0 and 1"),
         (lambda: block_quantile([1.0], [1.0], [1, 2], q=0.5), "block_of_value must have one entry per value"),
         (lambda: block_quantile([1.0], [-1.0], [1], q=0.5), "weights must not be negative"),
