@@ -16,8 +16,12 @@ from poroscan.batch import image
 from poroscan.batch.recipe import make_recipe
 from poroscan.batch.scan import scan_folder
 from poroscan.errors import SettingsError, StoreError
+from poroscan.report.regime import REGIME_WORDS
 
-TABLES = ("particles.csv", "particles.parquet", "pores.parquet", "curves.parquet", "batches.csv", "run.json")
+TABLES = (
+    "particles.csv", "particles.parquet", "pores.parquet", "curves.parquet", "batches.csv", "limits.csv", "dictionary.csv",
+    "summary.json", "report.html", "report.pdf", "run.json",
+)  # fmt: skip
 SETTINGS = {"intake": {"pixel_size_um": 0.5}, "measure": {"bootstrap_replicates": 20}}  # quick
 RECIPE = make_recipe(SETTINGS)
 
@@ -33,8 +37,8 @@ def test_a_folder_becomes_a_run(folder: Path, tmp_path: Path) -> None:
     assert list(table["batch"]) == ["one", "one", "two"]
     # the drawn disc has radius 48 px, and half a micrometre per pixel
     assert table["equivalent_diameter_um"].to_numpy() == pytest.approx(48.0, rel=0.03)
-    assert table["flags"].str.contains("no_atlas").all()
-    assert table["regime"].isna().all()
+    assert set(table["regime"]) <= set(REGIME_WORDS)
+    assert not table["flags"].str.contains("no_atlas").any()
     batches = pd.read_csv(tmp_path / "run" / "batches.csv")
     assert batches["porosity"][0] == pytest.approx(table["porosity"][:2].mean())
     pores = pq.read_table(tmp_path / "run" / "pores.parquet").to_pandas()
