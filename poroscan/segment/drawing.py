@@ -127,8 +127,8 @@ def _fine_mask(
     holes = float((filled & ~raw).sum()) / max(float(filled.sum()), 1.0) if best.name in BY_GREY else 0.0
     closed, used = close_body(filled, radius=radius, pore=pore, holes=holes)
     closed = _largest(closed & ~others)
-    if radius is None and best.name in BY_GREY and not others.any() and holes > POROUS:
-        closed = fill_holes(bulge_over_mouths(closed, raw & filled))
+    if radius is None and best.name in BY_GREY and not (others & grown).any() and holes > POROUS:
+        closed = fill_holes(bulge_over_mouths(closed, raw & filled)) & ~others
     return closed, float((closed & ~filled).sum()) / max(float(closed.sum()), 1.0), used
 
 

@@ -19,7 +19,6 @@ from skimage.filters import threshold_otsu
 
 from poroscan.section import BoolArray, FloatArray
 from poroscan.segment.closing import close_mask, fill_holes, inner_radius, mouth_radius, split_touching
-from poroscan.segment.hull import convex_hull
 
 Float32 = npt.NDArray[np.float32]
 
@@ -257,12 +256,16 @@ def _solidity(mask: BoolArray) -> float:
 
 
 def _solidity_of(labels: npt.NDArray[np.int32], sizes: npt.NDArray[np.integer]) -> float:
+    from skimage.morphology import (
+        convex_hull_image,
+    )  # the hull of the pixels' corners: small bodies are not solid by being small
+
     area = hull = 0.0
     boxes = ndimage.find_objects(labels)
     for k in np.argsort(-sizes)[:12]:
         box = boxes[int(k)]
         area += float(sizes[k])
-        hull += float(convex_hull(labels[box] == k + 1).sum())
+        hull += float(convex_hull_image(labels[box] == k + 1).sum())
     return area / hull
 
 

@@ -21,7 +21,7 @@ Float = npt.NDArray[np.float64]
 
 #: Angle in radians over which the fitted radius may bend.
 STIFFNESS = 0.18
-#: Largest standard deviation of the known outline from the fit, and largest bulge, over the particle's radius.
+#: Largest spread (1.4826 times the median deviation) of the known outline about the fit, and largest bulge, over the particle's radius.
 FIT, BULGE = 0.02, 0.06
 #: Material within this many pixels of the outline holds it.
 HELD = 2.5
@@ -65,7 +65,7 @@ def bulge_over_mouths(body: BoolArray, material: BoolArray) -> BoolArray:
         return body
     fit = _envelope(outline, held)
     size = float(np.median(outline[held]))
-    if float((outline - fit)[held].std()) > FIT * size:
+    if 1.4826 * float(np.median(np.abs(outline - fit)[held])) > FIT * size:
         return body
     # a short run of held bins between two mouths is a tip of a wall: the arc passes over it
     mouths = ndimage.binary_closing(np.tile(~held, 3), np.ones(5))[count : 2 * count]
