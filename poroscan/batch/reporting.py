@@ -2,10 +2,12 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from pathlib import Path
+from typing import Any
 
 from poroscan.batch.store import RunFolder
-from poroscan.errors import MissingExtraError
+from poroscan.errors import PoroscanError, StoreError
 from poroscan.qc.settings import settings_of
 from poroscan.report.content import report_content
 from poroscan.report.page import write_page
@@ -33,8 +35,6 @@ def write_reports(run: RunFolder, *, ledger: str | Path | None = None) -> list[s
     ------
     StoreError
         If the run or the ledger cannot be read, or a report cannot be written; the earlier ones are whole.
-    PoroscanError
-        If the PDF cannot be set.
     """
     data = read_run_data(run.path)
     trends = None
@@ -44,11 +44,17 @@ def write_reports(run: RunFolder, *, ledger: str | Path | None = None) -> list[s
     content = report_content(data, trends=trends)
     with run.replacing("report.html") as path:
         write_page(content, run.path, path)
-    if not data.run["recipe"].get("report", {}).get("pdf", True):
-        return []
+        # within the block: a disk that fills up here leaves both earlier reports, which then still say the same
+        return _write_pdf(run, content) if data.run["recipe"].get("report", {}).get("pdf", True) else []
+
+
+def _write_pdf(run: RunFolder, content: Mapping[str, Any]) -> list[str]:
+    """The PDF where it can be had; where not, why, which costs the page nothing."""
     try:
         with run.replacing("report.pdf") as path:
             write_pdf(content, run.path, path)
-    except MissingExtraError as error:
+    except StoreError:
+        raise
+    except PoroscanError as error:
         return [str(error)]
     return []

@@ -17,7 +17,7 @@ from drawn_particles import draw_particle, write_png
 
 from poroscan.batch import reporting, scan
 from poroscan.cli.app import main
-from poroscan.errors import StoreError
+from poroscan.errors import PoroscanError, StoreError
 from poroscan.qc import ledger
 
 #: What the drawn particles have: porosity about 0.15, equivalent diameter about 96 pixels of 0.5 µm.
@@ -219,6 +219,8 @@ def test_a_full_disk_leaves_the_old_report_whole(
     top: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch, name: str
 ) -> None:
     before = {n: (top / "run" / n).read_bytes() for n in ("report.html", "report.pdf")}
+    about = top / "run" / "run.json"
+    about.write_text(about.read_text().replace("Pore structure of particle", "Another title of particle"))
 
     def full(_content: object, _run: Path, target: Path) -> None:
         target.write_bytes(b"half a rep")
@@ -229,6 +231,25 @@ def test_a_full_disk_leaves_the_old_report_whole(
     assert "No space left on device; what was there is unharmed" in capsys.readouterr().err
     assert {n: (top / "run" / n).read_bytes() for n in before} == before
     assert not [p for p in (top / "run").iterdir() if p.name.startswith(".new")]
+    monkeypatch.undo()
+    assert main(["report", str(top / "run")]) == 0
+    assert "Another title" in (top / "run" / "report.html").read_text(encoding="utf-8")
+    assert (top / "run" / "report.pdf").read_bytes() != before["report.pdf"]
+
+
+def test_a_pdf_that_cannot_be_set_costs_the_page_nothing(
+    top: Path, capsys: pytest.CaptureFixture[str], monkeypatch: pytest.MonkeyPatch
+) -> None:
+    def refused(*_: object) -> None:
+        raise PoroscanError("report.pdf could not be set (no reason)")
+
+    monkeypatch.setattr(reporting, "write_pdf", refused)
+    (top / "run" / "report.html").unlink()
+    before = (top / "run" / "report.pdf").read_bytes()
+    assert main(["report", str(top / "run")]) == 0
+    assert "note: report.pdf could not be set (no reason)" in capsys.readouterr().err
+    assert (top / "run" / "report.html").is_file()
+    assert (top / "run" / "report.pdf").read_bytes() == before
 
 
 def test_without_the_extra_the_page_is_still_written(
