@@ -25,7 +25,7 @@ def matcher(atlas):
 
 def test_files_are_as_listed_and_every_regime_has_runs(atlas) -> None:
     assert verify(PACKAGED) >= 3
-    assert min(atlas.counts().values()) >= 30
+    assert min(atlas.counts().values()) >= 60
     assert sum(p.stat().st_size for p in PACKAGED.iterdir()) < 25e6
 
 
