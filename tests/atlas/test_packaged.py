@@ -39,8 +39,9 @@ def test_labels_are_those_of_the_paths(atlas) -> None:
 def test_held_out_simulations(atlas, matcher) -> None:
     """Floors well below the figures of docs/matching.md: a change that costs accuracy shows."""
     for figures in held_out(atlas, matcher):
-        assert figures.balanced > 0.55, figures.title
-        assert 0.8 < figures.coverage < 0.97, figures.title
+        assert figures.balanced > (0.6 if "interior" in figures.title else 0.75), figures.title
+        if "clear" not in figures.title:  # sets are made for all runs: of clear cases they hold more
+            assert 0.85 < figures.coverage < 0.95, figures.title
         assert figures.size < 2.6, figures.title
         if "clean fields; clear cases" in figures.title:
             assert figures.balanced > 0.88
