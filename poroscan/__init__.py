@@ -46,6 +46,9 @@ _PUBLIC = {
     "simulate": "poroscan.demix.particle",
     "RenderSettings": "poroscan.render.settings",
     "render_section": "poroscan.render.sem",
+    "load_atlas": "poroscan.atlas.store",
+    "load_packaged": "poroscan.atlas.store",
+    "Matcher": "poroscan.atlas.matching",
 }
 
 __all__ = ["__version__", *_PUBLIC]
