@@ -48,12 +48,17 @@ def regime_answer(row: Row) -> str:
     if found == "unlike_atlas":
         return "Not determined: the particles are unlike any simulated particle of the atlas."
     probability = row.get("regime_probability")
-    sure = "" if probability is None else f" (probability {plain(100 * float(probability), digits=2)}\u00a0%)"
+    sure = "" if probability is None else f" (probability {_percent(float(probability))})"
     others = [k for k in str(row.get("regime_set") or "").replace(",", " ").split() if k != found]
     text = f"{regime_words(found)[:1].upper()}{regime_words(found)[1:]}{sure}"
     if not others:
         return f"{text}; no other regime is in the 90\u00a0% set."
     return f"{text}; also in the 90\u00a0% set: {', '.join(map(regime_words, others))}."
+
+
+def _percent(probability: float) -> str:
+    """In per cent; what rounds to certainty is not said to be certain."""
+    return "above 99\u00a0%" if probability > 0.99 else f"{plain(100 * probability, digits=2)}\u00a0%"
 
 
 def advice_answer(row: Row, *, wanted: str | None) -> str:

@@ -12,7 +12,7 @@ from scipy import ndimage
 
 from poroscan.section import BoolArray
 from poroscan.segment.cleanup import Float32
-from poroscan.segment.closing import close_body, distance_to, fill_holes, split_touching
+from poroscan.segment.closing import close_body, distance_to, fill_holes, inner_radius, split_touching
 from poroscan.segment.outline import BY_GREY, Candidate, texture_window
 from poroscan.segment.rim import bulge_over_mouths
 from poroscan.segment.settings import SegmentSettings
@@ -22,6 +22,8 @@ Labels = npt.NDArray[np.int32]
 
 #: Smallest island of wall at an open rim, over the area of the particle; what is smaller is dust.
 ISLAND = 2e-4
+#: Reach of a bridged wedge of ground from the neighbouring particle, over the particle's own radius.
+WEDGE = 0.3
 #: Least pore fraction of particles whose outline is bulged over mouths; dense ones have none.
 POROUS = 0.02
 
@@ -121,6 +123,9 @@ def _fine_mask(
     band = 3 * step if best.name in BY_GREY else (texture_window(best.raw.shape) // 2 + 1) * step
     grown = distance_to(body) <= (3 * step if best.name in BY_GREY else step)
     deep = distance_to(~body) > band
+    if best.name in BY_GREY and (others & grown).any():
+        # between two particles the reduced body holds the wedge of ground that its closing bridged
+        deep &= distance_to(others) > WEDGE * inner_radius(body)
     own = (raw & grown & ~others) | deep
     filled = _with_islands(ndimage.binary_opening(fill_holes(own), np.ones((3, 3))) | deep, body)
     pore = _largest_area(filled & ~raw) if best.name in BY_GREY else 0.0

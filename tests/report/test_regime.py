@@ -19,6 +19,7 @@ def test_a_regime_comes_with_what_is_not_ruled_out() -> None:
         "Instantaneous demixing, both phases continuous (probability 87\u00a0%); "
         "also in the 90\u00a0% set: instantaneous demixing, polymer-lean phase dispersed."
     )
+    assert "probability above 99\u00a0%" in regime_answer(row | {"regime_probability": 0.9999})
     assert "no other regime" in regime_answer(row | {"regime_set": "spinodal"})
     assert "unlike any" in regime_answer({"regime": "unlike_atlas"})
 

@@ -27,6 +27,17 @@ def test_three_particles_in_contact_are_whole_particles(rng: np.random.Generator
     assert len(found.sections) == 3
 
 
+def test_a_narrow_gap_of_ground_is_no_pore(rng: np.random.Generator) -> None:
+    """Two dense discs ten pixels apart: the ground that a closing bridges belongs to neither, and no pore opens there."""
+    shape, centres, radius = (420, 720), [(210, 185), (210, 535)], 170
+    grey = np.where(_discs(shape, centres, radius), 0.55, 0.12) + rng.normal(0, 0.02, shape)
+    found = segment_picture(Picture(grey.astype(np.float32), UNKNOWN_PIXEL_SIZE))
+    assert len(found.sections) == 2
+    for section in found.sections:
+        assert np.count_nonzero(section.particle) == pytest.approx(np.pi * radius**2, rel=0.01)
+        assert np.count_nonzero(section.pores) < 0.0005 * np.count_nonzero(section.particle)
+
+
 @pytest.mark.parametrize(
     ("centre", "edge"), [((150, 150), False), ((150, 60), False), ((150, 0), True), ((0, 0), True)]
 )
