@@ -68,7 +68,9 @@ def test_accuracy_table(atlas, matcher, capsys) -> None:
         print("\n" + table(figures))
     for kind, scope in (("whole", "whole"), ("interior", "texture")):
         own = own_distances(atlas, matcher, scope, kind)
-        far = [matcher.match(d.values, kind).distance for _, d in foreign_views(3, kind=kind, seed=2)]
+        # a dozen pictures are too few for a share: one in which no pores are found is as near as a dense particle
+        seen = [d for seed in (0, 2) for _, d in foreign_views(6, kind=kind, seed=seed)]
+        far = [matcher.match(d.values, kind).distance for d in seen]
         area = area_under_curve(own, np.nan_to_num(np.array(far), nan=np.inf))
         with capsys.disabled():
             print(f"foreign textures, {kind}: {len(far)} pictures, area under the ROC curve {area:.3f}")
