@@ -12,7 +12,7 @@ from PIL import Image
 
 from poroscan.atlas.space import AXES, NAMES
 from poroscan.atlas.store import Atlas
-from poroscan.demix.regime import REGIMES
+from poroscan.demix.regime import REGIME_WORDS, REGIMES
 
 _SIDE = 56
 _COLUMNS, _ROWS = 20, 13
@@ -23,13 +23,6 @@ COLOURS = {
     "undemixed": "#7f7f7f", "delayed": "#0072b2", "lean_nucleation": "#009e73", "spinodal": "#e69f00",
     "rich_nucleation": "#cc79a7",
 }  # fmt: skip
-WORDS = {
-    "undemixed": "no demixing",
-    "delayed": "delayed demixing",
-    "lean_nucleation": "instantaneous demixing, polymer-lean phase dispersed",
-    "spinodal": "instantaneous demixing, both phases continuous",
-    "rich_nucleation": "instantaneous demixing, polymer-rich phase dispersed",
-}
 
 _STYLE = """
 body{font:15px/1.5 system-ui,sans-serif;margin:2rem auto;max-width:1220px;padding:0 1rem;color:#1b1b1b;background:#fff}
@@ -43,7 +36,8 @@ def page(atlas: Atlas) -> str:
     """The page as HTML."""
     counts = atlas.counts()
     key = "".join(
-        f'<span><i style="background:{COLOURS[r]}"></i>{html.escape(WORDS[r])} ({counts[r]})</span>' for r in REGIMES
+        f'<span><i style="background:{COLOURS[r]}"></i>{html.escape(REGIME_WORDS[r])} ({counts[r]})</span>'
+        for r in REGIMES
     )
     pictures = "".join(_symbol(atlas, i) for i in range(len(atlas.runs)))
     known = [i for i in range(len(atlas.runs)) if np.isfinite(atlas.runs.parameters[i]).all()]
@@ -91,7 +85,7 @@ def _use(atlas: Atlas, index: int, x: float, y: float) -> str:
 def _words(atlas: Atlas, index: int) -> str:
     values = atlas.runs.parameters[index]
     listed = [f"{a.label} {v:.3g}" for a, v in zip(AXES, values, strict=True) if np.isfinite(v)]
-    return "\n".join([f"{atlas.runs.name[index]}: {WORDS[atlas.runs.regime[index]]}", *listed])
+    return "\n".join([f"{atlas.runs.name[index]}: {REGIME_WORDS[atlas.runs.regime[index]]}", *listed])
 
 
 def _map(atlas: Atlas, known: list[int], x_name: str, y_name: str) -> str:
@@ -128,4 +122,4 @@ def _gallery(atlas: Atlas, regime: str) -> str:
     per_row = 20
     uses = "".join(_use(atlas, i, (k % per_row) * _SIDE, (k // per_row) * _SIDE) for k, i in enumerate(mine))
     height = -(-len(mine) // per_row) * _SIDE
-    return f'<h2>{html.escape(WORDS[regime])}</h2><svg viewBox="0 0 {per_row * _SIDE} {height}">{uses}</svg>'
+    return f'<h2>{html.escape(REGIME_WORDS[regime])}</h2><svg viewBox="0 0 {per_row * _SIDE} {height}">{uses}</svg>'

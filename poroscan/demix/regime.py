@@ -3,8 +3,9 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
+from types import MappingProxyType
 
 import numpy as np
 
@@ -12,6 +13,16 @@ from poroscan.demix.path import FirstDemixing, PathRow
 
 #: Keys of the regimes, from no demixing to polymer-rich beads.
 REGIMES: tuple[str, ...] = ("undemixed", "delayed", "lean_nucleation", "spinodal", "rich_nucleation")
+#: Regime -> words for people.
+REGIME_WORDS: Mapping[str, str] = MappingProxyType(
+    {
+        "undemixed": "no demixing",
+        "delayed": "delayed demixing",
+        "lean_nucleation": "instantaneous demixing, polymer-lean phase dispersed",
+        "spinodal": "instantaneous demixing, both phases continuous",
+        "rich_nucleation": "instantaneous demixing, polymer-rich phase dispersed",
+    }
+)
 
 #: Onset over R²/D from which on demixing is delayed, by dimensions: the time at which Crank's cylinder (sphere) has taken up
 #: 60 % of what it will take up (0.1 and 0.05; Crank 1975, equations 5.23 and 6.20).

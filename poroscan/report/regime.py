@@ -9,20 +9,14 @@ from collections.abc import Mapping
 from types import MappingProxyType
 from typing import Any
 
+from poroscan.demix.regime import REGIME_WORDS as REGIMES_IN_WORDS
 from poroscan.report.numbers import plain
 
 Row = Mapping[str, Any]
 
 #: Regime key -> words for people.
 REGIME_WORDS: Mapping[str, str] = MappingProxyType(
-    {
-        "undemixed": "no demixing",
-        "delayed": "delayed demixing",
-        "lean_nucleation": "instantaneous demixing, polymer-lean phase dispersed",
-        "spinodal": "instantaneous demixing, both phases continuous",
-        "rich_nucleation": "instantaneous demixing, polymer-rich phase dispersed",
-        "unlike_atlas": "unlike any simulated particle of the atlas",
-    }
+    {**REGIMES_IN_WORDS, "unlike_atlas": "unlike any simulated particle of the atlas"}
 )
 
 _NO_PARTICLE = "Not determined: no particle of this batch counts."
